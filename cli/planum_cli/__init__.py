@@ -1,0 +1,1 @@
+"""The command `planum`: only here is printing, progress and exit codes."""

@@ -1,0 +1,1 @@
+"""One short module per command, loaded when it runs."""

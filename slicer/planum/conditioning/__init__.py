@@ -1,0 +1,1 @@
+"""Comparable traces: dewow, gain, band-pass, background."""

@@ -1,0 +1,1 @@
+"""A set of lines as one regular array."""

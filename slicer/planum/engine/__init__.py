@@ -1,0 +1,1 @@
+"""The line pass: raw line to strip."""

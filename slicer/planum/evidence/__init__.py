@@ -1,0 +1,1 @@
+"""Velocity from the site's own data."""

@@ -1,0 +1,1 @@
+"""One recorded line at a time: readers, positions."""

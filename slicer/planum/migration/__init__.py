@@ -1,0 +1,1 @@
+"""Migration, line by line."""

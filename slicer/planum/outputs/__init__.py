@@ -1,0 +1,1 @@
+"""What leaves the program: rasters, NetCDF, GeoPackage, pictures, report."""

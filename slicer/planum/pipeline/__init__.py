@@ -1,0 +1,1 @@
+"""Census, estimate, resolve, run; recipe and provenance."""

@@ -1,0 +1,1 @@
+"""What is drawn in 3-D, testable off screen."""

@@ -1,0 +1,1 @@
+"""Grids placed on the map by control points."""

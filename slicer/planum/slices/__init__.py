@@ -1,0 +1,1 @@
+"""Depth intervals, amplitude over them, and the plan grid between lines."""

@@ -1,0 +1,1 @@
+"""What the crew wrote down: survey.toml, the line register, control points."""

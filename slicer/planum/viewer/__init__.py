@@ -1,0 +1,1 @@
+"""The window: how the scene is controlled."""
