@@ -25,8 +25,10 @@ LIMIT_MARGIN = 0.02
 """A filled value leaves the range of the neighbouring lines by no more than this share of it."""
 
 CAUTIONS = (
-    "Depth slices are no clearance to dig: buried services are located by licensed practice under the local permit-to-dig rules.",
-    "Unexploded ordnance, human remains and protected monuments have their own law and licences; radar transmitters may need a radio licence.",
+    "Depth slices are no clearance to dig: buried services are located by licensed practice"
+    " under the local permit-to-dig rules.",
+    "Unexploded ordnance, human remains and protected monuments have their own law and licences;"
+    " radar transmitters may need a radio licence.",
     "Every depth carries an error and refers to a surface; absence of an anomaly is not absence of archaeology.",
 )
 """Shown in the report, on every sheet, in the GIS layers' metadata and in the command's help; never lifted."""

@@ -14,6 +14,7 @@ Every error carries one or more :class:`Problem`: where it is, what came, what i
 
 from __future__ import annotations
 
+import difflib
 import json
 from collections.abc import Iterable
 from dataclasses import asdict, dataclass
@@ -130,8 +131,6 @@ class PlanumWarning(UserWarning):
 
 def nearest(word: str, allowed: Iterable[str]) -> str:
     """Return a phrase naming the nearest allowed word, or all of them when none is near."""
-    import difflib
-
     allowed = sorted(allowed)
     near = difflib.get_close_matches(word, allowed, n=1, cutoff=0.6)
     return f"did you mean {near[0]!r}?" if near else "allowed: " + json.dumps(allowed)[1:-1].replace('"', "")

@@ -380,8 +380,8 @@ class Statement(Record):
     def sentence(self) -> str:
         """Return the statement as people read it."""
         return (
-            f"{self.quantity}, {self.statistic} from {self.top_m:.2f} to {self.bottom_m:.2f} m (± {self.depth_error_m:.2f} m)"
-            f" below {self.surface}, visit {self.date}; velocity {self.velocity_m_per_ns:.4f} ±"
+            f"{self.quantity}, {self.statistic} from {self.top_m:.2f} to {self.bottom_m:.2f} m"
+            f" (± {self.depth_error_m:.2f} m) below {self.surface}, visit {self.date}; velocity {self.velocity_m_per_ns:.4f} ±"
             f" {self.velocity_error_m_per_ns:.4f} m/ns ({self.velocity_origin}); time zero: {self.zero_rule}, ±"
             f" {self.zero_error_ns:.2f} ns; {self.migration}; {self.fill}; {self.coverage_rule}; {self.resolution};"
             f" {self.stretch}."
