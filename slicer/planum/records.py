@@ -381,9 +381,9 @@ class Statement(Record):
         """Return the statement as people read it."""
         return (
             f"{self.quantity}, {self.statistic} from {self.top_m:.2f} to {self.bottom_m:.2f} m"
-            f" (± {self.depth_error_m:.2f} m) below {self.surface}, visit {self.date}; velocity {self.velocity_m_per_ns:.4f} ±"
-            f" {self.velocity_error_m_per_ns:.4f} m/ns ({self.velocity_origin}); time zero: {self.zero_rule}, ±"
-            f" {self.zero_error_ns:.2f} ns; {self.migration}; {self.fill}; {self.coverage_rule}; {self.resolution};"
+            f" (± {self.depth_error_m:.2f} m) below {self.surface}, visit {self.date};"
+            f" velocity {self.velocity_m_per_ns:.4f} ± {self.velocity_error_m_per_ns:.4f} m/ns ({self.velocity_origin});"
+            f" time zero: {self.zero_rule}, ± {self.zero_error_ns:.2f} ns; {self.migration}; {self.fill}; {self.coverage_rule}; {self.resolution};"
             f" {self.stretch}."
         )
 
