@@ -1,0 +1,77 @@
+"""Whole files or none: everything is written under another name beside its place and then moved there."""
+
+from __future__ import annotations
+
+import json
+import os
+from collections.abc import Iterator, Mapping
+from contextlib import contextmanager
+from pathlib import Path
+
+from PIL import Image
+from PIL.PngImagePlugin import PngInfo
+
+from planum.errors import MachineError, Problem
+from planum.records import Statement
+
+__all__ = ["PNG_KEY", "aside", "save_png", "statement_text"]
+
+PNG_KEY = "planum-statement"
+"""Keyword of the PNG text chunk, and name of the HTML meta element, that hold the statement as JSON."""
+
+
+@contextmanager
+def aside(path: Path) -> Iterator[Path]:
+    """Give a name to write to; move the file to ``path`` when the block ends well, remove it when it does not.
+
+    A process killed half-way leaves ``path`` as it was.
+
+    Raises
+    ------
+    MachineError
+        When the disk refuses.
+    """
+    part = path.with_name(f".part-{path.name}")
+    try:
+        path.parent.mkdir(parents=True, exist_ok=True)
+        part.unlink(missing_ok=True)
+        yield part
+        os.replace(part, path)
+    except OSError as error:
+        part.unlink(missing_ok=True)
+        raise MachineError(
+            Problem(
+                f"cannot write: {error}", do="check the free space, the permissions and open programs", file=str(path)
+            )
+        ) from error
+    except BaseException:
+        part.unlink(missing_ok=True)
+        raise
+
+
+def statement_text(statement: Statement | Mapping[str, str]) -> str:
+    """Return the statement's tags as one line of ASCII JSON."""
+    tags = statement.tags() if isinstance(statement, Statement) else dict(statement)
+    return json.dumps(tags, sort_keys=True, ensure_ascii=True)
+
+
+def save_png(
+    path: Path, picture: Image.Image, *, title: str, sentence: str = "", statement: str = "", dpi: float = 120.0
+) -> None:
+    """Write a picture with its statement in text chunks; the same picture gives the same bytes.
+
+    Parameters
+    ----------
+    title, sentence
+        Go to the standard keywords ``Title`` and ``Description`` (PNG specification, section 11.3.3.2).
+    statement
+        JSON from :func:`statement_text`.
+    """
+    chunks = PngInfo()
+    chunks.add_itxt("Title", title)
+    if sentence:
+        chunks.add_itxt("Description", sentence)
+    if statement:
+        chunks.add_itxt(PNG_KEY, statement)
+    with aside(path) as part:
+        picture.save(part, format="PNG", pnginfo=chunks, dpi=(dpi, dpi), compress_level=4)
