@@ -1,0 +1,148 @@
+"""The scene as a PNG, drawn off screen; in a process of its own where a crash must not take the run down."""
+
+from __future__ import annotations
+
+import json
+import os
+import sys
+import tempfile
+from collections.abc import Sequence
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pyvista as pv
+import xarray as xr
+from PIL import Image
+
+from planum.errors import Problem
+from planum.scene.build import Lines, Scene, build_scene
+from planum.scene.drawing import (
+    aim,
+    draw_frame,
+    draw_isosurface,
+    draw_legend,
+    draw_lines,
+    draw_plane,
+    draw_text,
+    light,
+)
+from planum.scene.environment import prepare_environment
+from planum.scene.probe import run_drawing
+
+__all__ = ["SIZE", "render", "render_safely"]
+
+SIZE = (1600, 1100)
+_FINER = 2  # drawn twice as fine and averaged: clean edges whatever the driver's own smoothing does
+TIMEOUT_S = 600.0
+
+
+def render(scene: Scene, path: Path, *, size: tuple[int, int] = SIZE) -> None:
+    """Draw a scene off screen into a PNG, written aside and renamed.
+
+    Parameters
+    ----------
+    scene
+        What to draw.
+    path
+        The PNG; its folder exists.
+    size
+        Width and height in pixels.
+    """
+    prepare_environment()
+    scale = _FINER * size[0] / SIZE[0]
+    plotter = pv.Plotter(off_screen=True, window_size=[_FINER * side for side in size], lighting="none")
+    try:
+        light(plotter)
+        draw_frame(plotter, scene, scale=scale)
+        actor = draw_plane(plotter, scene, scale=scale)
+        draw_isosurface(plotter, scene)
+        draw_lines(plotter, scene, scale=scale)
+        draw_text(plotter, scene, scale=scale)
+        if actor is not None:
+            draw_legend(plotter, actor)
+        aim(plotter, scene)
+        plotter.enable_ssao(radius=0.04 * scene.width_m, bias=0.002 * scene.width_m, kernel_size=32, blur=True)
+        pixels = plotter.screenshot(return_img=True)
+    finally:
+        plotter.close()
+    image = Image.fromarray(np.asarray(pixels)[..., :3]).resize(size, Image.Resampling.BOX)
+    _write(image, Path(path), scene)
+
+
+def render_safely(
+    slices_path: Path,
+    path: Path,
+    *,
+    lines: Lines = (),
+    size: tuple[int, int] = SIZE,
+    timeout_s: float = TIMEOUT_S,
+    command: Sequence[str] | None = None,
+    **options: Any,
+) -> Problem | None:
+    """Draw a slice file in a process of its own; a crash of the drawing library becomes a problem, no more.
+
+    Parameters
+    ----------
+    slices_path
+        The NetCDF file of a run.
+    path
+        The PNG to write.
+    lines, size
+        As for :func:`~planum.scene.build.build_scene` and :func:`render`.
+    timeout_s
+        Seconds after which drawing is given up.
+    command
+        Replaces this interpreter and module; two paths are appended.
+    **options
+        ``level``, ``slice_depth``, ``exaggeration`` of :func:`~planum.scene.build.build_scene`.
+
+    Returns
+    -------
+    Problem or None
+        What kept the picture from being made.
+    """
+    request = {
+        "size": list(size),
+        "lines": [[name, np.asarray(places, float).tolist()] for name, places in lines],
+        "options": options,
+    }
+    start = list(command) if command is not None else [sys.executable, "-m", "planum.scene.picture"]
+    done = run_drawing([*start, str(slices_path), str(path)], text=json.dumps(request), timeout_s=timeout_s)
+    if isinstance(done, Problem):
+        return done
+    if not Path(path).is_file():
+        return Problem(came="the drawing process ended without a picture", file=str(path), key="rendering")
+    return None
+
+
+def _write(image: Image.Image, path: Path, scene: Scene) -> None:
+    from PIL.PngImagePlugin import PngInfo
+
+    said = PngInfo()
+    said.add_text("Title", scene.title)
+    said.add_text("Description", "; ".join([scene.slice_text(), scene.level_text(), *scene.notes()]))
+    said.add_text("Warning", scene.caution)
+    handle, aside = tempfile.mkstemp(prefix=f".{path.name}-", suffix=".part", dir=path.parent)
+    try:
+        with os.fdopen(handle, "wb") as file:
+            image.save(file, format="PNG", pnginfo=said)
+        Path(aside).chmod(0o644)
+        Path(aside).replace(path)
+    except BaseException:
+        Path(aside).unlink(missing_ok=True)
+        raise
+
+
+def _main(arguments: Sequence[str]) -> None:
+    """Draw the NetCDF of the first argument into the PNG of the second; the rest is JSON on standard input."""
+    source, target = arguments
+    request = json.loads(sys.stdin.read() or "{}")
+    with xr.open_dataset(source, engine="h5netcdf", decode_times=False, chunks={"depth": 1}) as slices:
+        lines = [(name, np.array(places, float)) for name, places in request.get("lines", [])]
+        scene = build_scene(slices, lines=lines, **request.get("options", {}))
+    render(scene, Path(target), size=tuple(request.get("size", SIZE)))
+
+
+if __name__ == "__main__":
+    _main(sys.argv[1:])
