@@ -5,7 +5,7 @@ What the contract knows but this version cannot do yet is refused by name, never
 
 from __future__ import annotations
 
-import datetime
+import datetime as dt
 import math
 import typing
 from collections.abc import Iterator, Mapping, Sequence
@@ -80,8 +80,8 @@ def _placed(
     data: Mapping[str, Any], places: toml_text.Places, mistakes: Sequence[tuple[Loc, tuple[str, str, str]]], file: str
 ) -> list[Problem]:
     problems = [
-        Problem(*(printable(part) for part in parts), file=file, line=places.line(loc), key=_spelled(data, loc))
-        for loc, parts in mistakes
+        Problem(came, allowed, do, file=file, line=places.line(loc), key=_spelled(data, loc))
+        for loc, (came, allowed, do) in mistakes
     ]
     return sorted(dict.fromkeys(problems), key=lambda p: int(p.line or 0))
 
@@ -144,7 +144,7 @@ def _names(data: Mapping[str, Any]) -> Iterator[tuple[Loc, tuple[str, str, str]]
             continue
         for kind in ("radar", "visit"):
             word = table.get(kind)
-            word = _plain(word) if isinstance(word, datetime.date) else word
+            word = _plain(word) if isinstance(word, dt.date) else word
             if isinstance(word, str) and word and word not in known[kind]:
                 yield (
                     (*loc, kind),
@@ -176,36 +176,33 @@ def _not_yet(data: Mapping[str, Any]) -> Iterator[tuple[Loc, tuple[str, str, str
 
 
 def _translated(data: Mapping[str, Any], entry: Any) -> tuple[Loc, tuple[str, str, str]]:
-    """One pydantic error as key path and what came, what is allowed, what to do."""
+    """Return one pydantic error as key path and what came, what is allowed, what to do."""
     loc = _as_written(data, entry["loc"])
-    kind, ctx, value = entry["type"], entry.get("ctx", {}), entry["input"]
-    key = str(loc[-1]) if loc else ""
-    if kind == "planum":
-        return loc, (ctx["came"], ctx["allowed"], ctx["do"])
-    if kind == "extra_forbidden":
-        return loc, (f"unknown key {key!r}", _nearest_key(loc), "")
-    if kind == "missing":
-        field = _field_help(loc)
-        table = len(loc) == 1
-        return loc, (f"{f'the table [{key}]' if table else key} is missing", f"needed: {field}", "")
-    if kind == "too_short":
-        return loc, (f"{key} is empty", f"needed: {_field_help(loc)}", "")
-    if kind == "literal_error":
-        allowed = str(ctx["expected"]).replace("'", '"').replace(" or ", ", ")
-        return loc, (f"{key} is {_shown(value)}", f"allowed: {allowed}", "")
-    if kind in _TYPES:
-        do = "write a decimal point and no unit" if kind in ("float_type", "int_type") else ""
-        return loc, (f"{key} is {_shown(value)}", f"{_TYPES[kind]} is allowed", do if isinstance(value, str) else "")
-    limit = " ".join(f"{word}" for word in str(entry["msg"]).split())
-    return loc, (
-        f"{key} is {_shown(value)}",
-        limit[:1].lower() + limit[1:].replace("nput should be", "t should be"),
-        "",
-    )
+    ctx, value, key = entry.get("ctx", {}), entry["input"], str(loc[-1]) if loc else ""
+    came, do = f"{key} is {_shown(value)}", ""
+    match entry["type"]:
+        case "planum":
+            came, allowed, do = ctx["came"], ctx["allowed"], ctx["do"]
+        case "extra_forbidden":
+            came, allowed = f"unknown key {key!r}", _nearest_key(loc)
+        case "missing":
+            came = f"the table [{key}] is missing" if len(loc) == 1 else f"{key} is missing"
+            allowed = f"needed: {_field_help(loc)}"
+        case "too_short":
+            came, allowed = f"{key} is empty", f"needed: {_field_help(loc)}"
+        case "literal_error":
+            allowed = "allowed: " + str(ctx["expected"]).replace("'", '"').replace(" or ", ", ")
+        case kind if kind in _TYPES:
+            allowed = f"{_TYPES[kind]} is allowed"
+            if isinstance(value, str) and kind in ("float_type", "int_type"):
+                do = "write it without quotes, with a decimal point and no unit"
+        case _:
+            allowed = str(entry["msg"]).replace("Input should be", "it should be")
+    return loc, (came, allowed, do)
 
 
 def _as_written(data: Mapping[str, Any], loc: Loc) -> Loc:
-    """The path in the file of a path in the model: ``[radar]`` stands for the only ``[[radar]]``."""
+    """Return the path in the file of a path in the model: ``[radar]`` stands for the only ``[[radar]]``."""
     if len(loc) > 1 and isinstance(data.get(str(loc[0])), Mapping) and loc[1] == 0:
         return (loc[0], *loc[2:])
     return tuple(loc)
@@ -238,13 +235,13 @@ def _field_help(loc: Loc) -> str:
 
 
 def _plain(value: Any) -> str:
-    if isinstance(value, datetime.date):
+    if isinstance(value, dt.date):
         return value.isoformat()
     return value if isinstance(value, str) else ""
 
 
 def _shown(value: Any) -> str:
-    """A short picture of a value; whole numbers of thousands of digits cannot be printed."""
+    """Return a short picture of a value; whole numbers of thousands of digits cannot be printed."""
     if isinstance(value, bool):
         return "true" if value else "false"
     if isinstance(value, int) and abs(value) >= 10**18:
@@ -259,7 +256,7 @@ def _shown(value: Any) -> str:
 
 
 def _spelled(data: Mapping[str, Any], loc: Loc) -> str:
-    """A key path for people: ``radar.name``, ``grid[A].cell_m``, ``grid[2].cell_m`` (counted from 1)."""
+    """Return a key path for people: ``radar.name``, ``grid[A].cell_m``, ``grid[2].cell_m`` (counted from 1)."""
     words = ""
     at: Any = data
     for part in loc:

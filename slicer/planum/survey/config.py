@@ -6,7 +6,7 @@ Units stand in the keys: m, ns, MHz, m/ns. :mod:`planum.survey.checking` turns a
 
 from __future__ import annotations
 
-import datetime
+import datetime as dt
 import re
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
@@ -85,14 +85,14 @@ def _code(value: str) -> str:
 def _date(value: object) -> object:
     if isinstance(value, str):
         try:
-            return datetime.date.fromisoformat(value)
+            return dt.date.fromisoformat(value)
         except ValueError:
             raise wrong(f"the date {value!r} is not understood", "a date is written 2026-04-18") from None
     return value
 
 
 def _visit_name(value: object) -> object:
-    return value.isoformat() if type(value) is datetime.date else value
+    return value.isoformat() if type(value) is dt.date else value
 
 
 Name = Annotated[str, AfterValidator(_name)]
@@ -176,7 +176,7 @@ class Visit(Table):
     """``[[visit]]``: a day, or part of one, with one ground condition."""
 
     name: OptionalName = Field("", description="optional: the date is used")
-    date: Annotated[datetime.date, BeforeValidator(_date)] = Field(description="the day, such as 2026-04-18")
+    date: Annotated[dt.date, BeforeValidator(_date)] = Field(description="the day, such as 2026-04-18")
     conditions: str = Field("", max_length=1000, description="weather before, ground, vegetation")
 
 
@@ -290,7 +290,7 @@ class Ground(Table):
 
     @classmethod
     def contradictions(cls, values: Mapping[str, Any]) -> Iterator[Mistake]:
-        """An error needs a velocity and is smaller than it."""
+        """Require that an error has a velocity and is smaller than it."""
         error, velocity = _number(values, "velocity_error_m_per_ns"), _number(values, "velocity_m_per_ns")
         if error is not None and values.get("velocity_m_per_ns") is None:
             yield Mistake(

@@ -50,9 +50,12 @@ def read_control(
         where = (point.grid, point.point.casefold())
         if point.point and where in seen:
             sheet.complain(
-                row, "point", f"the point {point.point!r} stands twice, first in line {seen[where]}",
-                "each point once per frame", "remove one row or rename the point",
-            )  # fmt: skip
+                row,
+                "point",
+                f"the point {point.point!r} stands twice, first in line {seen[where]}",
+                "each point once per frame",
+                "remove one row or rename the point",
+            )
         seen.setdefault(where, row.line)
         if len(sheet.problems) == before:
             points.append(point)
@@ -74,9 +77,12 @@ def _point(row: Row, config: SurveyConfig) -> ControlPoint:
             grid = config.grid_named(grid).name
         except KeyError:
             row.sheet.complain(
-                row, "grid", f"no [[grid]] is called {grid!r}", nearest(grid, {g.name for g in config.grid}),
+                row,
+                "grid",
+                f"no [[grid]] is called {grid!r}",
+                nearest(grid, {g.name for g in config.grid}),
                 "leave it blank for the site grid",
-            )  # fmt: skip
+            )
     return ControlPoint(
         point=row.needed("point"),
         local_x_m=x or 0.0,
@@ -107,7 +113,7 @@ def _frames(points: Sequence[ControlPoint], name: str) -> list[Problem]:
                     file=name,
                     line=line,
                     key="grid",
-                )  # fmt: skip
+                )
             )
     if not frames:
         problems.append(Problem(f"{name} holds no points", "2 or more", "remove the file to stay local", file=name))

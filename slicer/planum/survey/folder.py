@@ -127,7 +127,7 @@ def _survey_text(folder: Path, roots: Sequence[Path]) -> str:
                 "a survey folder holds survey.toml",
                 "planum new drafts one",
                 file="survey.toml",
-            )  # fmt: skip
+            )
         )
     return read_text_capped(folder, "survey.toml", most_bytes=MOST_TOML_BYTES, roots=roots)
 
@@ -166,7 +166,7 @@ def _registers(folder: Path, config: SurveyConfig, roots: Sequence[Path]) -> Reg
 
 
 def _empty_grids(config: SurveyConfig, register: Register) -> Iterator[Problem]:
-    """A grid without any line left; what was set aside says why."""
+    """Complain about a grid without any line left; what was set aside says why."""
     for grid in config.grid:
         if not any(row.grid == grid.name for row in register.rows):
             yield Problem(
@@ -211,7 +211,7 @@ def _short_form(folder: Path, config: SurveyConfig, grid: Grid, roots: Sequence[
                 "survey.toml",
                 "",
                 source[12:] + ".files",
-            )  # fmt: skip
+            )
         )
         return found
     radar, visit = _only(config, grid, found)
@@ -246,7 +246,7 @@ def _only(config: SurveyConfig, grid: Grid, found: Register) -> tuple[str, str]:
             found.errors.append(Problem(came, "", f"add {kind} = ...", "survey.toml", "", f"grid[{grid.name}].{kind}"))
             names.append("")
         else:
-            names.append(tables[0].name if tables else "")  # type: ignore[attr-defined]
+            names.append(tables[0].name if tables else "")
     return names[0], names[1]
 
 

@@ -4,9 +4,9 @@ from __future__ import annotations
 
 import re
 
+from pydantic_core import PydanticCustomError
 from pyproj import CRS
 from pyproj.exceptions import CRSError
-from pydantic_core import PydanticCustomError
 
 from planum.errors import printable
 

@@ -42,7 +42,7 @@ def check_places(rows: Sequence[RegisterRow]) -> list[Problem]:
                     f"line {row.grid}/{row.line} is not parallel to local x or y",
                     "lines at an angle to the local axes are not supported yet",
                     "turn the local frame of this grid",
-                )  # fmt: skip
+                )
             )
     for grid, own in by_grid.items():
         problems.extend(_one_direction(grid, own))
@@ -66,16 +66,18 @@ def _one_direction(grid: str, rows: Sequence[RegisterRow]) -> Iterator[Problem]:
     for row in rows:
         if direction(row) != direction(first):
             yield _problem(
-                row, "end_x_m",
+                row,
+                "end_x_m",
                 f"grid {grid} has lines along {direction(first)} (line {first.line}) and along {direction(row)}"
                 f" (line {row.line})",
-                "two directions in one grid are not supported yet", "give each direction its own [[grid]]",
-            )  # fmt: skip
+                "two directions in one grid are not supported yet",
+                "give each direction its own [[grid]]",
+            )
             return
 
 
 def _one_recording(rows: Sequence[RegisterRow]) -> Iterator[Problem]:
-    """The same traces of the same file stand in one row only."""
+    """Complain about traces of a file that stand in two rows."""
     by_file: dict[tuple[str, int | None, int | None], list[RegisterRow]] = defaultdict(list)
     for row in rows:
         by_file[row.file, row.part, row.channel].append(row)
@@ -85,14 +87,16 @@ def _one_recording(rows: Sequence[RegisterRow]) -> Iterator[Problem]:
             if a.last_trace is None or (b.first_trace or 0) <= a.last_trace:
                 a_where = a.source.rpartition(" line ")[2]
                 yield _problem(
-                    b, "file", f"{b.file} is already used in line {a_where}, for {a.grid}/{a.line}",
+                    b,
+                    "file",
+                    f"{b.file} is already used in line {a_where}, for {a.grid}/{a.line}",
                     "the same traces stand in one row only",
                     "mend the file name, or tell the pieces apart by first_trace and last_trace, or part",
-                )  # fmt: skip
+                )
 
 
 def _one_place(rows: Sequence[RegisterRow]) -> Iterator[Problem]:
-    """Rows of one set: pieces of a line lie in one straight row, and no place is recorded twice."""
+    """Complain about pieces of a line that lie apart, and about places recorded twice, in one set."""
     along = 0 if direction(rows[0]) == "x" else 1
 
     def across(row: RegisterRow) -> float:
@@ -110,19 +114,22 @@ def _one_place(rows: Sequence[RegisterRow]) -> Iterator[Problem]:
         for row in own[1:]:
             if abs(across(row) - across(own[0])) > 2 * OFF_AXIS_M:
                 yield _problem(
-                    row, "line",
+                    row,
+                    "line",
                     f"line {row.grid}/{row.line} stands at {across(own[0]):g} m and at {across(row):g} m",
-                    "the pieces of a line lie in one row", "mend the line's number or its place",
-                )  # fmt: skip
+                    "the pieces of a line lie in one row",
+                    "mend the line's number or its place",
+                )
     for own in [*places.values()]:
         for a, b in pairwise(sorted(own, key=extent)):
             shared = min(extent(a)[1], extent(b)[1]) - extent(b)[0]
             if shared > max(OVERLAP_M, OVERLAP_SHARE * min(a.length_m, b.length_m)):
                 same = a.line.casefold() == b.line.casefold()
                 yield _problem(
-                    b, "line",
+                    b,
+                    "line",
                     f"line {b.grid}/{b.line} covers {shared:.2f} m of the place of "
                     + (f"its row in {a.source}" if same else f"line {a.line} ({a.source})"),
                     "each place is recorded once per radar and visit",
                     "put the number of the good line in superseded_by of the other, or mend the places",
-                )  # fmt: skip
+                )

@@ -5,7 +5,7 @@ Start and end are in walking order in the grid's local frame, so zigzag, partial
 
 from __future__ import annotations
 
-import datetime
+import datetime as dt
 import re
 from collections.abc import Sequence
 from dataclasses import dataclass, field, replace
@@ -136,9 +136,12 @@ def _entry(row: Row, config: SurveyConfig, own: Sequence[Grid]) -> RegisterRow |
         )
     if row.text("channel"):
         row.sheet.complain(
-            row, "channel", "an antenna array (channel) is not supported yet", "",
+            row,
+            "channel",
+            "an antenna array (channel) is not supported yet",
+            "",
             "give one line file and one row per channel, and leave the column empty",
-        )  # fmt: skip
+        )
     file = row.needed("file")
     radar, visit = _radar(row, config, grid), _visit(row, config, grid)
     part = row.index("part")
@@ -165,7 +168,7 @@ def _entry(row: Row, config: SurveyConfig, own: Sequence[Grid]) -> RegisterRow |
 
 
 def _grid(row: Row, own: Sequence[Grid]) -> Grid | None:
-    """The row's grid in any case; a blank cell is filled when there is only one."""
+    """Return the row's grid in any case; a blank cell is filled when there is only one."""
     word = row.text("grid")
     if not word and len(own) == 1:
         return own[0]
@@ -175,9 +178,12 @@ def _grid(row: Row, own: Sequence[Grid]) -> Grid | None:
         if grid.name.casefold() == word.casefold():
             return grid
     row.sheet.complain(
-        row, "grid", f"no [[grid]] with this register is called {word!r}", nearest(word, {g.name for g in own}),
+        row,
+        "grid",
+        f"no [[grid]] with this register is called {word!r}",
+        nearest(word, {g.name for g in own}),
         "add a [[grid]] to survey.toml or mend the name",
-    )  # fmt: skip
+    )
     return None
 
 
@@ -214,7 +220,7 @@ def _iso(word: str) -> str:
     """``18.4.2026``, which spreadsheet programs make of a date, as 2026-04-18; anything else unchanged."""
     if parts := re.fullmatch(r"([0-9]{1,2})\.([0-9]{1,2})\.([0-9]{4})", word):
         try:
-            return datetime.date(int(parts[3]), int(parts[2]), int(parts[1])).isoformat()
+            return dt.date(int(parts[3]), int(parts[2]), int(parts[1])).isoformat()
         except ValueError:
             return word
     return word
@@ -244,6 +250,6 @@ def _superseded(found: Register) -> list[Problem]:
                     line,
                     "superseded_by",
                     severity="warning",
-                )  # fmt: skip
+                )
             )
     return notes

@@ -1,6 +1,6 @@
-"""Trust nothing that came on a stick: paths, sizes, text and names from a survey folder.
+r"""Trust nothing that came on a stick: paths, sizes, text and names from a survey folder.
 
-The rules: a path is relative, ``\\`` is read as ``/``, and with all links followed it ends inside the folder or a
+The rules: a path is relative, ``\`` is read as ``/``, and with all links followed it ends inside the folder or a
 root the user named. A text file is read only when it is a regular file of believable size.
 """
 
@@ -28,8 +28,8 @@ _DEVICES = frozenset({"con", "prn", "aux", "nul", "conin$", "conout$"}) | {
 
 
 def is_device(name: str) -> bool:
-    """Whether a file of this name would be a device on Windows, whatever its suffix and case (``NUL``, ``com1.txt``)."""
-    return name.split(".")[0].strip().lower() in _DEVICES
+    """Whether a file of this name would be a device on Windows, whatever its suffix and case (``com1.txt``)."""
+    return name.split(".", maxsplit=1)[0].strip().lower() in _DEVICES
 
 
 def natural_key(text: str) -> tuple[tuple[int, int, str], ...]:

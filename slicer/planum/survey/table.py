@@ -71,9 +71,12 @@ class Row:
         if re.search(r"[0-9],[0-9]|,[0-9]", plain):
             if self.sheet.decimal == "both":
                 self.sheet.complain(
-                    self, column, f"{column} is {raw!r}, and other cells use a decimal point",
-                    "one decimal mark in the whole file", "write all numbers without separators of thousands",
-                )  # fmt: skip
+                    self,
+                    column,
+                    f"{column} is {raw!r}, and other cells use a decimal point",
+                    "one decimal mark in the whole file",
+                    "write all numbers without separators of thousands",
+                )
                 return None
             plain = plain.replace(",", ".", 1)
         value = float(plain) if _NUMBER.fullmatch(plain) else math.nan
@@ -178,7 +181,10 @@ def _columns(sheet: Sheet, head: Sequence[str], line: int, needed: Sequence[str]
             problems.append(Problem(f"the column {name!r} stands twice", "once", "", sheet.file, str(line), name))
     for name in needed:
         if name not in names:
-            problems.append(Problem(f"the column {name!r} is missing", "needed: " + ",".join(needed), "", sheet.file, str(line), name))  # fmt: skip
+            wanted = "needed: " + ",".join(needed)
+            problems.append(
+                Problem(f"the column {name!r} is missing", wanted, file=sheet.file, line=str(line), key=name)
+            )
     if problems:
         raise SurveyError(problems)
     return names
