@@ -33,6 +33,7 @@ class Scene:
     """
 
     title: str
+    code: str
     block: Block
     isosurface: pv.PolyData
     plane: pv.ImageData
@@ -72,8 +73,8 @@ class Scene:
     def level_text(self) -> str:
         """Return the level of the isosurface and where it comes from."""
         if self.isosurface.n_cells == 0:
-            return f"no isosurface at {self.level:.3g}"
-        return f"isosurface at {self.level:.3g} ({self.level_origin})"
+            return f"nothing reaches amplitude {self.level:.3g}"
+        return f"isosurface at amplitude {self.level:.3g} ({self.level_origin})"
 
     def notes(self) -> tuple[str, ...]:
         """Return what must be known to read the picture: exaggeration, thinning."""
@@ -134,6 +135,7 @@ def build_scene(
     low, high = (float(q) for q in np.quantile(known, STRETCH))
     return Scene(
         title=str(slices.attrs.get("title", "")),
+        code=str(slices.attrs.get("code", "")),
         block=block,
         isosurface=contour(block, level),
         plane=plane(block, index),
@@ -170,8 +172,8 @@ def _polylines(lines: Lines, origin: tuple[float, float]) -> pv.PolyData:
     cells: list[int] = []
     number: list[int] = []
     start = 0
-    for place, (_, path) in enumerate(lines):
-        path = np.asarray(path, float)
+    for place, (_, given) in enumerate(lines):
+        path = np.asarray(given, float)
         if path.ndim != 2 or path.shape[1] != 2 or len(path) < 2:
             raise ValueError(f"a line is an (n, 2) array of x, y with n of at least 2, got {path.shape}")
         points.append(np.column_stack([path - origin, np.zeros(len(path))]))

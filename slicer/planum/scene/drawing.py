@@ -2,22 +2,47 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass
 from functools import partial
-from typing import Any
+from typing import Any, Literal
 
 import numpy as np
 import pyvista as pv
 
 from planum.scene.build import Scene
 
-__all__ = ["INK", "WARM", "aim", "draw_frame", "draw_isosurface", "draw_lines", "draw_plane", "greys", "light"]
+__all__ = [
+    "INK",
+    "WARM",
+    "aim",
+    "draw_frame",
+    "draw_isosurface",
+    "draw_legend",
+    "draw_lines",
+    "draw_plane",
+    "draw_text",
+    "greys",
+    "light",
+    "write",
+]
 
-INK, QUIET, PAPER = "#22262b", "#6d747c", "white"
+INK, QUIET, PAPER = "#22262b", "#59616a", "white"
 WARM = "#d9601a"
 """Vermilion near the one of Okabe & Ito's colour-blind-safe set: told from every grey by all common eyes."""
 LINE = "#8b97a3"
 _LIGHTEST, _DARKEST = 0.95, 0.07
 """Greys of the weakest and strongest cells: the weakest still stands off the white paper."""
+
+
+@dataclass(frozen=True)
+class Letters:
+    """How a text looks: size in pixels, colour, weight; ``side`` and ``hanging`` say which part sits at its place."""
+
+    size: int
+    color: str = QUIET
+    bold: bool = False
+    side: Literal["left", "right"] = "left"
+    hanging: bool = False
 
 
 def greys() -> np.ndarray:
@@ -46,7 +71,7 @@ def draw_isosurface(plotter: pv.Plotter, scene: Scene) -> Any:
 
 def draw_lines(plotter: pv.Plotter, scene: Scene, *, scale: float = 1.0) -> Any:
     """Draw the recorded lines on the surface, thin and pale."""
-    look = {"color": LINE, "opacity": 0.55, "line_width": 1.2 * scale, "lighting": False}
+    look = {"color": LINE, "opacity": 0.45, "line_width": 1.2 * scale, "lighting": False}
     return _put(plotter, scene.lines, scene, name="lines", **look)
 
 
@@ -59,7 +84,9 @@ def draw_frame(plotter: pv.Plotter, scene: Scene, *, scale: float = 1.0) -> None
     _put(plotter, frame.north, scene, name="north", color=INK, lighting=False)
     for number, label in enumerate(frame.labels):
         x, y, z = label.at
-        text = pv.Label(label.text, position=(x, y, z * scene.exaggeration), size=int((19 if label.strong else 17) * scale))
+        text = pv.Label(
+            label.text, position=(x, y, z * scene.exaggeration), size=int((19 if label.strong else 17) * scale)
+        )
         text.prop.color = INK if label.strong else QUIET
         text.prop.font_family = "arial"
         text.prop.bold = label.strong
@@ -70,15 +97,15 @@ def draw_frame(plotter: pv.Plotter, scene: Scene, *, scale: float = 1.0) -> None
 
 def draw_text(plotter: pv.Plotter, scene: Scene, *, scale: float = 1.0) -> None:
     """Draw title, slice, isosurface, notes, the legend of greys and the caution round the block."""
-    put = partial(_write, plotter, scale=scale)
-    put("title", scene.title or "depth slices", (0.035, 0.955), size=30, color=INK, bold=True)
-    put("slice text", scene.slice_text(), (0.035, 0.915), size=20, color=INK)
-    put("level text", scene.level_text(), (0.035, 0.883), size=20, color=WARM, bold=True)
+    put = partial(write, plotter, scale=scale)
+    put("title", scene.title or "depth slices", (0.035, 0.955), Letters(30, color=INK, bold=True))
+    put("slice text", scene.slice_text(), (0.035, 0.915), Letters(20, color=INK))
+    put("level text", scene.level_text(), (0.035, 0.883), Letters(20, color=WARM, bold=True))
     notes = [*scene.notes(), "lines on the surface" if scene.lines.n_cells else ""]
-    put("notes", "; ".join(note for note in notes if note), (0.035, 0.851), size=17, color=QUIET)
-    put("caution", scene.caution, (0.035, 0.03), size=16, color=QUIET)
-    put("weak", "weak", (0.822, 0.952), size=17, color=QUIET, side="right")
-    put("strong", "strong", (0.950, 0.952), size=17, color=QUIET)
+    put("notes", "; ".join(note for note in notes if note), (0.035, 0.851), Letters(17))
+    put("caution", scene.caution, (0.035, 0.03), Letters(16))
+    put("weak", "weak", (0.822, 0.952), Letters(17, side="right"))
+    put("strong", "strong", (0.950, 0.952), Letters(17))
 
 
 def draw_legend(plotter: pv.Plotter, actor: Any) -> None:
@@ -155,27 +182,19 @@ def aim(
     plotter.renderer.ResetCameraClippingRange()
 
 
-def _write(
-    plotter: pv.Plotter,
-    name: str,
-    text: str,
-    at: tuple[float, float],
-    *,
-    size: int,
-    color: str,
-    bold: bool = False,
-    side: str = "left",
-    scale: float = 1.0,
+def write(
+    plotter: pv.Plotter, name: str, text: str, at: tuple[float, float], look: Letters, *, scale: float = 1.0
 ) -> None:
     """Write a text at a place of the picture (shares of its size), replacing the one of that name."""
     actor = pv.Text(text)
     actor.GetPositionCoordinate().SetCoordinateSystemToNormalizedViewport()
     actor.SetPosition(*at)
-    actor.prop.font_size = int(size * scale)
+    actor.prop.font_size = int(look.size * scale)
     actor.prop.font_family = "arial"
-    actor.prop.color, actor.prop.bold = color, bold
-    actor.prop.justification_horizontal = side
-    actor.prop.justification_vertical = "center"
+    actor.prop.SetLineSpacing(1.35)
+    actor.prop.color, actor.prop.bold = look.color, look.bold
+    actor.prop.justification_horizontal = look.side
+    actor.prop.justification_vertical = "top" if look.hanging else "center"
     plotter.add_actor(actor, name=name, reset_camera=False, render=False, pickable=False)
 
 

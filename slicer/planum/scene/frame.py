@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import math
 from dataclasses import dataclass
 from typing import Literal
@@ -79,8 +80,8 @@ def frame_of(
     staff(1, (south, north), step, (west - thick, 0.0, bottom))
     low = bottom - 0.012 * wide / exaggeration
     labels += [Label((v, south - off, low), f"{v:g}", "right") for v in _ticks(west, east, step)]
-    labels += [Label((west - off, v, low), f"{v:g}", "right") for v in _ticks(south, north, step)]
-    east_of, north_of = (f" of {o:.0f} m" if o else "" for o in origin)
+    labels += [Label((west - off, v, low), f"{v:g}", "right") for v in _ticks(south, north - 0.3 * step, step)]
+    east_of, north_of = (f" of {o:,.0f}".replace(",", " ") if o else "" for o in origin)
     title = 5.0 * off
     labels.append(Label(((west + east) / 2, south - title, low), f"m east{east_of}", "centre", strong=True))
     labels.append(Label((west - title, (south + north) / 2, low), f"m north{north_of}", "right", strong=True))
@@ -101,7 +102,7 @@ def _bands(start: float, stop: float, step: float) -> list[tuple[float, float]]:
     """Cut from ``start`` to ``stop`` at the multiples of ``step``, lowest value first of each pair."""
     low, high = min(start, stop), max(start, stop)
     cuts = [low, *[float(t) for t in _ticks(low, high, step) if low + 1e-9 < t < high - 1e-9], high]
-    bands = list(zip(cuts[:-1], cuts[1:], strict=True))
+    bands = list(itertools.pairwise(cuts))
     return bands if start <= stop else bands[::-1]
 
 

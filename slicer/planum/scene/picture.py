@@ -14,6 +14,7 @@ import numpy as np
 import pyvista as pv
 import xarray as xr
 from PIL import Image
+from PIL.PngImagePlugin import PngInfo
 
 from planum.errors import Problem
 from planum.scene.build import Lines, Scene, build_scene
@@ -117,8 +118,6 @@ def render_safely(
 
 
 def _write(image: Image.Image, path: Path, scene: Scene) -> None:
-    from PIL.PngImagePlugin import PngInfo
-
     said = PngInfo()
     said.add_text("Title", scene.title)
     said.add_text("Description", "; ".join([scene.slice_text(), scene.level_text(), *scene.notes()]))
