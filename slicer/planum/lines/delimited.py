@@ -21,7 +21,7 @@ from planum.lines.recording import ReadOptions, Recording
 
 __all__ = ["READER", "DelimitedReader"]
 
-_LARGEST = 1 << 29  # bytes; text this long is a mistake, a line has some ten megabytes
+_LARGEST = 1 << 28  # bytes; text this long is a mistake, a line has some ten megabytes
 _DECLARED = re.compile(r"#\s*(rows|sample_interval_ns)\s*[:=]\s*(\S+)\s*$", re.IGNORECASE)
 
 
@@ -97,7 +97,7 @@ def _error(
 
 
 def _lines(path: Path) -> list[tuple[int, str]]:
-    """Stripped lines with their numbers from 1; UTF-8 or, where it is not, Latin-1."""
+    """Return stripped lines with their numbers from 1; UTF-8 or, where it is not, Latin-1."""
     if path.stat().st_size > _LARGEST:
         raise _error(path, f"{path.stat().st_size} bytes of text", allowed=f"up to {_LARGEST}", do="export it as SEG-Y")
     content = path.read_bytes()

@@ -88,7 +88,7 @@ def _by_unit(
     if field > 0 and exact_us and not math.isclose(interval, exact_us * 1e3, rel_tol=0.01):
         warnings = (
             Problem(
-                came=f"the interval is {interval:g} ns by interval_unit and {exact_us * 1e3:g} ns by the revision 2 field",
+                came=f"interval {interval:g} ns by interval_unit, {exact_us * 1e3:g} ns by the revision 2 field",
                 do="leave interval_unit out if the revision 2 field is right",
                 file=file,
                 key="interval_unit",
@@ -124,14 +124,11 @@ def check_interval(recording: Recording, options: ReadOptions, file: str) -> tup
     """
     interval, n = recording.interval_ns, recording.data.shape[1]
     window = interval * n
-    if not (math.isfinite(window) and interval > 0 and WINDOW_NS[0] <= window <= WINDOW_NS[1]):
-        factors = {"1000 times smaller": 1e-3, "1000 times larger": 1e3, "a million times smaller": 1e-6}
-        likely = [text for text, f in factors.items() if WINDOW_NS[0] <= window * f <= WINDOW_NS[1]]
+    if not WINDOW_NS[0] <= window <= WINDOW_NS[1]:  # also true for NaN
         raise LineError(
             Problem(
-                came=f"the window is {window:g} ns ({n} samples of {interval:g} ns, interval from: {recording.interval_origin})",
-                allowed=_WINDOW
-                + (f"; the interval is probably {likely[0]}" + _named(recording, likely[0]) if likely else ""),
+                came=f"the window is {window:g} ns: {n} samples of {interval:g} ns ({recording.interval_origin})",
+                allowed=_WINDOW + _probable(recording, options),
                 do="set sample_interval_ns or interval_unit for this radar",
                 file=file,
                 key="sample_interval_ns",
@@ -154,8 +151,12 @@ def check_interval(recording: Recording, options: ReadOptions, file: str) -> tup
     return (problem,) if per_period < SAMPLES_PER_PERIOD_GOOD else ()
 
 
-def _named(recording: Recording, factor: str) -> str:
-    """Name the unit the field most likely holds, when the file has a field."""
-    field = recording.header.get("interval_field")
-    likely = likely_units(float(field), recording.data.shape[1]) if field else ()
-    return f" (the file's field {field} fits {' or '.join(likely)})" if likely else f" ({factor.split()[-1]} unit)"
+def _probable(recording: Recording, options: ReadOptions) -> str:
+    """Return a phrase naming the unit in which the number that was used gives a believable window."""
+    number = options.interval_ns
+    if number is None:
+        # a field without value is 0, and the revision 2 field counts only where the plain one is empty or not asked for
+        exact, plain = (recording.header.get(k) or 0.0 for k in ("interval_revision_2_us", "interval_field"))
+        number = float(exact if options.interval_unit is None or not plain else plain) or recording.interval_ns
+    likely = likely_units(number, recording.data.shape[1])
+    return f"; likely unit of {number:g}: {' or '.join(likely)}" if likely else ""

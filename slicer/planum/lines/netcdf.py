@@ -7,6 +7,7 @@ and are refused. Classic files (CDF-1, CDF-2) are read from memory, bounded by t
 from __future__ import annotations
 
 import io
+import math
 from collections.abc import Callable, Iterator, Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -60,7 +61,7 @@ class NetcdfReader:
                 _refuse_elsewhere(path)
                 with h5netcdf.File(path, "r", phony_dims="sort") as file:
                     return _record(path, options, {n: _hdf5(v) for n, v in file.variables.items()})
-            if magic.startswith(_MAGIC[:2]):
+            if magic.startswith(_MAGIC[:2]) and path.stat().st_size <= _LARGEST:
                 with netcdf_file(io.BytesIO(path.read_bytes()), "r", mmap=False) as file:
                     return _record(path, options, {n: _classic(v) for n, v in file.variables.items()})
         except LineError:
@@ -91,10 +92,12 @@ def _refuse_elsewhere(path: Path) -> None:
             )
 
 
-def _elsewhere(group: h5py.Group, depth: int = 0) -> Iterator[tuple[str, str]]:
-    if depth > 32:  # hard links can make groups contain themselves
-        yield group.name, "a group nested more than 32 deep"
-        return
+def _elsewhere(group: h5py.Group, seen: set[int] | None = None) -> Iterator[tuple[str, str]]:
+    seen = set() if seen is None else seen
+    address = h5py.h5o.get_info(group.id).addr
+    if address in seen:
+        return  # hard links can make groups contain themselves
+    seen.add(address)
     for key in group:
         link = group.get(key, getlink=True)
         if isinstance(link, h5py.ExternalLink):
@@ -107,13 +110,13 @@ def _elsewhere(group: h5py.Group, depth: int = 0) -> Iterator[tuple[str, str]]:
                 elif item.external:
                     yield item.name, "kept in external storage"
             elif isinstance(item, h5py.Group):
-                yield from _elsewhere(item, depth + 1)
+                yield from _elsewhere(item, seen)
 
 
 def _hdf5(variable: Any) -> _Variable:
     def load() -> np.ndarray:
         stored = variable._h5ds.id.get_storage_size()
-        size = int(np.prod(variable.shape)) * variable.dtype.itemsize
+        size = math.prod(variable.shape) * variable.dtype.itemsize
         if size > min(_LARGEST, _RATIO * stored):
             raise ValueError(f"{size} bytes of values from {stored} stored ones")
         return np.asarray(variable[...])
@@ -201,15 +204,14 @@ def _interval(
 ) -> tuple[float, str, tuple[Problem, ...]]:
     """Interval from the survey, else from a time coordinate that states its unit."""
     times = variables.get("time")
-    known = times is not None and times.dims == (sample,) and n_samples > 1
-    if options.interval_ns is not None or options.interval_unit is not None or not known or times is None:
-        field_value = float(_steps(path, times)) if known and times is not None else 0.0
-        return resolve_interval(options, field=field_value, n_samples=n_samples, file=path.name)
+    if times is None or times.dims != (sample,) or n_samples < 2:
+        return resolve_interval(options, field=0.0, n_samples=n_samples, file=path.name)
+    step = _steps(path, times)
     unit = str(times.attrs.get("units", "")).strip()
-    if unit not in _NS:
-        # without a unit the number is no more than a header field
-        return resolve_interval(options, field=_steps(path, times), n_samples=n_samples, file=path.name)
-    return _steps(path, times) * _NS[unit], f"time coordinate of the file, unit {unit}", ()
+    if options.interval_ns is None and unit in _NS:
+        # the unit is part of the number here; interval_unit is for files that cannot say it
+        return step * _NS[unit], f"time coordinate of the file, unit {unit}", ()
+    return resolve_interval(options, field=step, n_samples=n_samples, file=path.name)
 
 
 def _steps(path: Path, times: _Variable) -> float:

@@ -164,7 +164,7 @@ def _left_over(file: str, layout: RawLayout, kind: np.dtype, n_traces: int, left
 
 def _shifted(file: str, layout: RawLayout, offset: int) -> Problem:
     return Problem(
-        came=f"declared as {layout.sample_type}, but the samples are unsigned ones centred on {offset}; {offset} was taken off",
+        came=f"declared as {layout.sample_type}, but the samples are unsigned ones, centred on {offset} (taken off)",
         do=f'declare sample_type = "u{layout.sample_type}"',
         file=file,
         key="sample_type",

@@ -171,7 +171,7 @@ def _pick(path: Path, options: ReadOptions) -> tuple[str, LineReader]:
     suffix = path.suffix.lower()
     by_suffix = [name for name, reader in readers.items() if suffix in reader.suffixes]
     for name in [*by_suffix, *(n for n in readers if n not in by_suffix)]:
-        if _guarded(name, path, lambda name=name: readers[name].claims(path, head)):  # type: ignore[misc]
+        if _guarded(name, path, lambda name=name: readers[name].claims(path, head)):
             return name, readers[name]
     known = "; ".join(f"{n}: {' '.join(r.suffixes) or 'declared layout'}" for n, r in readers.items())
     raise LineError(
@@ -210,19 +210,15 @@ def _reason(error: BaseException) -> str:
 def _without_infinities(recording: Recording, file: str) -> Recording:
     """Flag constant and non-finite traces dead; a Fourier transform would spread one NaN over its whole line."""
     data = recording.data
-    dead = np.ptp(data, axis=1) == 0 if data.dtype.kind != "f" else None
-    if dead is None:
-        with np.errstate(invalid="ignore", over="ignore"):
-            low, high = data.min(axis=1), data.max(axis=1)
-        broken = ~(np.isfinite(low) & np.isfinite(high))
-        dead = broken | (low == high)
-    else:
-        broken = np.zeros(len(data), bool)
+    with np.errstate(invalid="ignore"):
+        low, high = data.min(axis=1), data.max(axis=1)
+    broken = ~(np.isfinite(low) & np.isfinite(high))
+    dead = broken | (low == high)
     flag = recording.flag | np.where(dead, FLAG_DEAD, 0).astype(np.uint8)
     if not broken.any():
         return replace(recording, flag=flag)
     problem = Problem(
-        came=f"{int(broken.sum())} trace(s) hold values that are not finite numbers, first trace {int(np.argmax(broken))}",
+        came=f"{int(broken.sum())} trace(s) hold values that are not finite, first in trace {int(np.argmax(broken))}",
         do="they are taken as dead",
         file=file,
         severity="warning",

@@ -107,7 +107,7 @@ class Recording:
     problems: tuple[Problem, ...] = ()
 
     def to_dataarray(self) -> xr.DataArray:
-        """Return ``amplitude`` (trace, sample) with ``time`` (sample) in ns from sample 0, ``flag`` and, if known, x, y."""
+        """Return ``amplitude`` (trace, sample) with ``time`` (sample), ns from sample 0, ``flag`` and x, y if known."""
         coords: dict[str, Any] = {
             "time": ("sample", self.interval_ns * np.arange(self.data.shape[1]), {"units": "ns"}),
             "flag": ("trace", self.flag),

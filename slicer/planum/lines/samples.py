@@ -62,7 +62,7 @@ def wrapped(data: np.ndarray) -> bool:
     """Tell whether signed integers really are unsigned ones centred on half scale.
 
     Such samples lie at both ends of the signed range and jump between them; moved by half the range they are small
-    and smooth. Both signs have to occur, the median moved sample must be below an eighth of the range's half, and
+    and smooth. Both signs have to occur, the median moved sample must be below a quarter of half the range, and
     the moved samples must vary less than a quarter of the unmoved ones: recordings clipped at one rail, or loud ones,
     do not pass.
     """
@@ -72,7 +72,7 @@ def wrapped(data: np.ndarray) -> bool:
     some = data[:: max(1, data.shape[0] // 256)].astype(np.int64)
     half = 1 << (8 * data.dtype.itemsize - 1)
     moved = np.where(some < 0, some + half, some - half)
-    if not ((some > 0).any() and (some < 0).any()) or np.median(np.abs(moved)) >= half / 8:
+    if not ((some > 0).any() and (some < 0).any()) or np.median(np.abs(moved)) >= half / 4:
         return False
     return bool(np.abs(np.diff(moved)).sum() < 0.25 * np.abs(np.diff(some)).sum())
 

@@ -193,7 +193,7 @@ def _check_samples(heads: np.ndarray, layout: SegyLayout, file: str, at: int, si
             Problem(
                 came=f"a trace states {stated[i]} samples, the file {layout.n_samples}",
                 allowed="all traces of a file have the same number of samples",
-                do="the file is damaged there, or its lines were recorded with different windows: export them one by one",
+                do="the file is damaged there, or holds lines with different windows: export them one by one",
                 file=file,
                 byte=at + i * size + TRACE["samples"].byte,
             )
@@ -210,7 +210,8 @@ def _values(words: np.ndarray, layout: SegyLayout) -> tuple[np.ndarray, int]:
 
 def _facts(layout: SegyLayout, offset: int) -> dict[str, Any]:
     return {
-        "format": f"SEG-Y {layout.revision[0]}.{layout.revision[1]}",
+        "format": "SEG-Y",
+        "revision": f"{layout.revision[0]}.{layout.revision[1]}",
         "revision_field": layout.revision_field,
         "sample_format": layout.format,
         "sample_format_name": segy_format.FORMAT_NAMES[layout.format],
@@ -231,7 +232,7 @@ def _facts(layout: SegyLayout, offset: int) -> dict[str, Any]:
 def _shifted(file: str, layout: SegyLayout, offset: int) -> Problem:
     name = segy_format.FORMAT_NAMES[layout.format]
     return Problem(
-        came=f"declared as {name}, but the samples are unsigned ones centred on {offset}; {offset} was taken off",
+        came=f"declared as {name}, but the samples are unsigned ones, centred on {offset} (taken off)",
         do="look at a raw section: it should show a steady direct wave and no torn bands",
         file=file,
         byte=segy_format.FILE["format"].byte,

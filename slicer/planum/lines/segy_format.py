@@ -11,7 +11,21 @@ from dataclasses import dataclass
 
 import numpy as np
 
-__all__ = ["BYTE_ORDER_CONSTANT", "END_TEXT", "FILE", "FORMATS", "HEAD", "TEXT", "TRACE", "TRACE_HEAD", "Field"]
+__all__ = [
+    "BYTE_ORDER_CONSTANT",
+    "END_TEXT",
+    "FILE",
+    "FORMATS",
+    "FORMAT_NAMES",
+    "HEAD",
+    "PAIRWISE_SWAPPED",
+    "TEXT",
+    "TRACE",
+    "TRACE_HEAD",
+    "Field",
+    "is_text",
+    "text_rows",
+]
 
 TEXT = 3200
 """Bytes of one text header."""
@@ -20,6 +34,7 @@ HEAD = 3600
 TRACE_HEAD = 240
 BYTE_ORDER_CONSTANT = 16909060
 """0x01020304, at 3297 in revision 2."""
+PAIRWISE_SWAPPED = 0x02010403
 END_TEXT = "((SEG: ENDTEXT))"
 """Last stanza when the number of extended text headers is not given (-1)."""
 

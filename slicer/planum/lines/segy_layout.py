@@ -83,6 +83,11 @@ class _Finder:
             raise self.error(
                 f"{len(self.head)} bytes, shorter than the {HEAD} bytes of the file headers", len(self.head)
             )
+        for way in "><":
+            if FILE["constant"].get(self.head, way) == fmt.PAIRWISE_SWAPPED:
+                raise self.error(
+                    "bytes are swapped in pairs", FILE["constant"].byte, allowed="most or least significant byte first"
+                )
         order = byte_order(self.head)
         if order is None:
             code = FILE["format"].get(self.head, ">")
@@ -113,7 +118,7 @@ class _Finder:
         size = TRACE_HEAD * (1 + extra) + n_samples * int(FORMATS[code][1:])
         if size > min(self.length - HEAD, _LARGEST_TRACE):
             raise self.error(
-                f"one trace of {n_samples} samples takes {size} bytes, the file has {self.length - HEAD} after its headers",
+                f"a trace of {n_samples} samples takes {size} bytes, {self.length - HEAD} follow the file headers",
                 FILE["samples"].byte,
                 do="the header is damaged or the file has lost its traces",
             )
@@ -193,7 +198,7 @@ class _Finder:
         return declared
 
     def texts(self, revision: tuple[int, int]) -> int:
-        """Declared number of extended text headers; a variable number (-1) is counted up to its end stanza."""
+        """Return the declared number of extended text headers; a variable one (-1) is counted up to its end stanza."""
         declared = self.get("texts") if revision >= (1, 0) else 0
         if declared != -1:
             return declared
@@ -233,6 +238,8 @@ class _Finder:
         room = self.length - first
         if trailers > 0 and trailers * TEXT < room:
             room -= trailers * TEXT
+        while trailers < 0 and not declared and room > size and fmt.is_text(self.at(first + room - TEXT, TEXT)):
+            room -= TEXT  # a variable number of trailers: text up to the file's end
         n, rest = divmod(room, size)
         if declared and trailers and declared <= n:
             return declared, declared

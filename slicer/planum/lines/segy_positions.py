@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+
 import numpy as np
 
 from planum.errors import Problem
@@ -11,6 +13,7 @@ __all__ = ["header_positions"]
 
 _FOOT = 0.3048  # m, international foot, exact (by definition, 1959)
 _ANGULAR = {2: "arc-seconds", 3: "decimal degrees", 4: "degrees, minutes, seconds"}
+_INSTEAD = "give start and end in the line register, or a projected track"
 _SCALARS = (1, 10, 100, 1000, 10000)
 
 
@@ -30,18 +33,14 @@ def header_positions(
     def problem(came: str, do: str, at: str) -> Problem:
         return Problem(came=came, do=do, file=file, byte=TRACE[at].byte, key="header positions", severity="warning")
 
-    units = set(np.unique(column("unit")).tolist())
-    if units - {0, 1}:
-        names = ", ".join(_ANGULAR.get(u, f"unknown unit {u}") for u in sorted(units - {0, 1}))
-        return None, None, [problem(f"header coordinates in {names} are not used: they need a projection, not yet supported",
-                                    "give start and end in the line register, or a projected track", "unit")]  # fmt: skip
+    angular = sorted(set(np.unique(column("unit")).tolist()) - {0, 1})
+    if angular:
+        names = ", ".join(_ANGULAR.get(u, f"unknown unit {u}") for u in angular)
+        came = f"header coordinates in {names} are not used: they need a projection, which is not yet supported"
+        return None, None, [problem(came, _INSTEAD, "unit")]
     x, y = _raw(column)
     if x is None or y is None:
-        return (
-            None,
-            None,
-            [problem("no coordinates in the trace headers", "give start and end in the line register", "source_x")],
-        )
+        return None, None, [problem("no coordinates in the trace headers", _INSTEAD, "source_x")]
     scalar = column("scalar")
     problems = []
     odd = sorted(set(np.abs(scalar).tolist()) - {0, *_SCALARS})
@@ -56,7 +55,7 @@ def header_positions(
     return x * factor, y * factor, problems
 
 
-def _raw(column) -> tuple[np.ndarray | None, np.ndarray | None]:  # type: ignore[no-untyped-def]
+def _raw(column: Callable[[str], np.ndarray]) -> tuple[np.ndarray | None, np.ndarray | None]:
     """Unscaled coordinates of the fullest place."""
     places = [(column(f"{p}_x").astype(float), column(f"{p}_y").astype(float)) for p in ("source", "group", "ensemble")]
     source, group, ensemble = places

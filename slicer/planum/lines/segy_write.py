@@ -69,10 +69,12 @@ def write_segy(  # noqa: PLR0913  (all but the data are named, with defaults)
     ------
     LineError
         When the values, the interval or the positions cannot be held.
+    OSError
+        When the system cannot write; a file that was there is left as it was.
     """
     path = Path(path)
     array = np.asarray(data)
-    _check(path.name, array, sample_format, revision, byte_order)
+    _check(path.name, array, sample_format, revision, byte_order, field_record)
     field = _interval_field(path.name, interval_ns, interval_unit, revision)
     n_traces, n_samples = array.shape
     rows = _text(
@@ -120,7 +122,7 @@ def _error(file: str, came: str, *, allowed: str = "", do: str = "", key: str = 
     return LineError(Problem(came=came, allowed=allowed, do=do, file=file, key=key))
 
 
-def _check(file: str, array: np.ndarray, sample_format: int, revision: int, byte_order: str) -> None:
+def _check(file: str, array: np.ndarray, sample_format: int, revision: int, byte_order: str, field_record: int) -> None:
     if revision not in _BY_REVISION:
         raise _error(file, f"revision {revision}", allowed="0, 1 or 2", key="revision")
     if sample_format not in _BY_REVISION[revision]:
@@ -133,6 +135,8 @@ def _check(file: str, array: np.ndarray, sample_format: int, revision: int, byte
         raise _error(
             file, f"data of shape {array.shape} and type {array.dtype}", allowed="real numbers (trace, sample)"
         )
+    if not -(2**31) <= field_record < 2**31:
+        raise _error(file, f"field record {field_record}", allowed="32 bits", key="field_record")
     if revision < 2 and array.shape[1] > 0x7FFF:
         raise _error(
             file, f"{array.shape[1]} samples per trace", allowed="32767 before revision 2", do="use revision=2"
