@@ -1,0 +1,166 @@
+"""What the conditioning steps learn from a set's facts: plain arrays in, plain numbers out."""
+
+from __future__ import annotations
+
+from typing import NamedTuple
+
+import numpy as np
+
+__all__ = [
+    "ABSORPTION_MOST",
+    "BLOCK_LINES",
+    "Corners",
+    "absorption",
+    "band_corners",
+    "gain_span",
+    "typical_blocks",
+]
+
+ABSORPTION_MOST = 1.0
+"""dB per ns of two-way time. Wet clay takes some 30 dB/m at 400 MHz and 0.06 m/ns, which is 0.9 (common practice)."""
+
+BLOCK_LINES = 21
+"""Lines in a sliding block: a wall under 3 of them is a seventh, which a median does not follow."""
+
+_ONE_BLOCK = 30
+_BOUNDS = (0.25, 2.5)
+"""Shares of the nominal frequency the band may reach: a cross-check, not an estimate."""
+
+_NOMINAL = (0.25, 0.4, 1.75, 2.5)
+"""Corners as shares of the nominal frequency, used when the spectrum tells nothing: two octaves, as pulses have."""
+
+_PASS, _STOP = 0.25, 0.1
+"""Share of the spectral peak where the pass band ends (-12 dB) and where the stop band begins (-20 dB)."""
+
+
+class Corners(NamedTuple):
+    """Four corner frequencies in GHz, and why they are not the measured ones ('' when they are)."""
+
+    low_stop: float
+    low_pass: float
+    high_pass: float
+    high_stop: float
+    note: str = ""
+
+    @classmethod
+    def of(cls, corners: tuple[float, float, float, float], note: str = "") -> Corners:
+        """Return corners rounded to a kilohertz, with a note."""
+        a, b, c, d = (round(float(c), 6) for c in corners)
+        return cls(a, b, c, d, note)
+
+
+def gain_span(envelope: np.ndarray, noise: float, time_ns: np.ndarray, *, start_ns: float, period_ns: float) -> float:
+    """Return the time in ns where the median envelope meets twice the noise and stays there for two periods.
+
+    The envelope is smoothed by a running median of one period, so that one dip does not end the record. The end of the
+    axis when it never meets, ``start_ns`` when it is there from the start.
+    """
+    step = float(time_ns[1] - time_ns[0])
+    smooth = _median(np.asarray(envelope, float), max(round(period_ns / step) | 1, 3))
+    below = (smooth <= 2.0 * noise) & (time_ns >= start_ns)
+    need = max(round(2.0 * period_ns / step), 1)
+    run = 0
+    for i in range(below.size):
+        run = run + 1 if below[i] else 0
+        if run == need or (run and i == below.size - 1):
+            return float(max(time_ns[i - run + 1], start_ns))
+    return float(time_ns[-1])
+
+
+def absorption(
+    envelope: np.ndarray,
+    noise: float,
+    time_ns: np.ndarray,
+    *,
+    power: float,
+    span_ns: tuple[float, float],
+    period_ns: float,
+) -> float:
+    """Return the absorption in dB/ns from the decay of the median envelope, spreading removed.
+
+    Noise power is subtracted; the slope is the median of all pairwise slopes (Theil 1950, Sen 1968, from memory) of
+    points half a period apart, bounded to 0..ABSORPTION_MOST. With fewer than 5 points it is 0: nothing is measured.
+    """
+    step = float(time_ns[1] - time_ns[0])
+    every = max(round(period_ns / 2.0 / step), 1)
+    smooth = _median(np.asarray(envelope, float), max(every | 1, 3))
+    pick = np.flatnonzero((time_ns >= span_ns[0]) & (time_ns <= span_ns[1]))[::every]
+    signal = smooth[pick] ** 2 - noise**2
+    pick, signal = pick[signal > 0], signal[signal > 0]
+    if pick.size < 5:
+        return 0.0
+    t = time_ns[pick]
+    level = 10.0 * np.log10(signal) + 20.0 * power * np.log10(t)
+    i, j = np.triu_indices(t.size, 1)
+    slope = float(np.median((level[j] - level[i]) / (t[j] - t[i])))
+    return float(np.clip(-slope, 0.0, ABSORPTION_MOST))
+
+
+def band_corners(spectrum: np.ndarray, step_ghz: float, *, nominal_ghz: float, nyquist_ghz: float) -> Corners:
+    """Return the four corners of the band of the ground, in GHz.
+
+    From the peak of the measured amplitude spectrum outwards: pass corners where it has fallen to a quarter, stop
+    corners where it has fallen to a tenth; all bounded to 0.25..2.5 of the nominal frequency and below Nyquist.
+    The nominal band is used, with a note, when there is no peak inside those bounds.
+    """
+    low, high = _BOUNDS[0] * nominal_ghz, min(_BOUNDS[1] * nominal_ghz, nyquist_ghz)
+    fallback = (low, _NOMINAL[1] * nominal_ghz, min(_NOMINAL[2] * nominal_ghz, 0.85 * high), high)
+    f = np.arange(np.size(spectrum)) * step_ghz
+    inside = np.flatnonzero((f >= low) & (f <= high))
+    if inside.size < 5:
+        return Corners.of(fallback, "the spectrum has too few frequencies near the nominal one")
+    smooth = np.convolve(np.asarray(spectrum, float), [0.25, 0.5, 0.25], mode="same")
+    peak = int(inside[np.argmax(smooth[inside])])
+    if not smooth[peak] > 0 or peak in (inside[0], inside[-1]):
+        return Corners.of(fallback, f"the spectrum has no peak between {low:.3g} and {high:.3g} GHz")
+    level = smooth / smooth[peak]
+    low_pass, high_pass = _falls(level, f, peak, _PASS, -1), _falls(level, f, peak, _PASS, 1)
+    low_stop, high_stop = _falls(level, f, peak, _STOP, -1), _falls(level, f, peak, _STOP, 1)
+    # Edges at least a fifth of the corner wide, or the response would ring for many periods.
+    low_pass = max(low_pass, 1.25 * low)
+    high_pass = min(high_pass, high / 1.2)
+    low_stop = min(max(low_stop, low), 0.8 * low_pass)
+    high_stop = max(min(high_stop, high), 1.2 * high_pass)
+    if not low_stop < low_pass < high_pass < high_stop:
+        return Corners.of(fallback, "the measured band is too narrow")
+    return Corners.of((low_stop, low_pass, high_pass, high_stop))
+
+
+def typical_blocks(typical: np.ndarray, line_m: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Return robust typical traces (block, time) and the positions (block,) they hold for.
+
+    The median over sliding blocks of 21 lines, half overlapping; all lines in one block when there are fewer than 30.
+
+    Parameters
+    ----------
+    typical : (line, time)
+        One typical trace of every recorded line.
+    line_m : (line,)
+        Their positions across, m.
+    """
+    order = np.argsort(line_m, kind="stable")
+    rows, at = np.asarray(typical, float)[order], np.asarray(line_m, float)[order]
+    n = at.size
+    if n < _ONE_BLOCK:
+        return np.median(rows, axis=0, keepdims=True), np.array([at.mean()])
+    count = max(2, round((n - BLOCK_LINES) / (BLOCK_LINES // 2)) + 1)
+    starts = np.unique(np.round(np.linspace(0, n - BLOCK_LINES, count)).astype(int))
+    blocks = [slice(s, s + BLOCK_LINES) for s in starts]
+    return np.array([np.median(rows[b], axis=0) for b in blocks]), np.array([at[b].mean() for b in blocks])
+
+
+def _falls(level: np.ndarray, f: np.ndarray, peak: int, share: float, way: int) -> float:
+    """Frequency where the level first falls to ``share`` going from the peak, linear between bins."""
+    i = peak
+    while 0 < i < level.size - 1 and level[i] > share:
+        i += way
+    if level[i] > share:
+        return float(f[i])
+    back = i - way
+    return float(f[i] + (f[back] - f[i]) * (share - level[i]) / max(level[back] - level[i], 1e-30))
+
+
+def _median(values: np.ndarray, window: int) -> np.ndarray:
+    half = window // 2
+    padded = np.pad(values, half, mode="edge")
+    return np.median(np.lib.stride_tricks.sliding_window_view(padded, window), axis=-1)

@@ -1,0 +1,262 @@
+"""Where the lines of a set lie: direction, nominal spacing, rows, and the cube's regular axes."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from typing import Literal
+
+import numpy as np
+
+from planum.errors import Problem, SurveyError
+from planum.records import CubeGeometry, LineEntry
+
+__all__ = [
+    "ALONE_M",
+    "OBLIQUE",
+    "cube_geometry",
+    "line_direction",
+    "line_spacing",
+    "place_rows",
+    "set_direction",
+    "trace_spacing",
+]
+
+Direction = Literal["x", "y"]
+
+OBLIQUE = 0.1
+"""Largest sideways drift of a straight line per metre along it (5.7 degrees): beyond it a line has no local axis."""
+
+ALONE_M = 0.25
+"""Width in m a single line stands for: it has no neighbour to measure a spacing from (common practice at 400 MHz)."""
+
+_SAME_M = 0.01
+"""Lines closer than 1 cm across are one line walked again: field tapes are read to the centimetre."""
+
+_OFF_ROW = 0.1
+"""Share of the line spacing by which a line may miss its row before it is reported."""
+
+
+def line_direction(start: Sequence[float], end: Sequence[float]) -> Direction | None:
+    """Return the local axis a straight line runs along, or None when it is oblique.
+
+    Parameters
+    ----------
+    start, end : (x, y) in local m
+        The line runs along x when its ends differ in y by no more than a tenth (5.7 degrees) of what they differ in x.
+
+    Returns
+    -------
+    "x", "y" or None
+        None for an oblique line and for one whose ends coincide.
+    """
+    dx, dy = abs(end[0] - start[0]), abs(end[1] - start[1])
+    if dx > 0 and dy <= OBLIQUE * dx:
+        return "x"
+    if dy > 0 and dx <= OBLIQUE * dy:
+        return "y"
+    return None
+
+
+def set_direction(entries: Sequence[LineEntry]) -> Direction:
+    """Return the local axis the lines of one set run along.
+
+    Raises
+    ------
+    SurveyError
+        Naming every line that is oblique, has no length, or runs across the others.
+    """
+    if not entries:
+        raise SurveyError(Problem("a set without lines", allowed="at least one line"))
+    found = [line_direction(e.start, e.end) for e in entries]
+    common: Direction = "x" if found.count("x") >= found.count("y") else "y"
+    problems = []
+    for entry, way in zip(entries, found, strict=True):
+        if way is None:
+            came = f"line {entry.line} of grid {entry.grid} runs from {_point(entry.start)} to {_point(entry.end)}"
+            allowed = f"along local x or y, drifting sideways by at most {OBLIQUE:g} m per m"
+            do = "correct its start and end in the register, or give the lines a grid turned their way"
+        elif way != common:
+            came = (
+                f"line {entry.line} of grid {entry.grid} runs along {way}, the others of set {entry.set} along {common}"
+            )
+            allowed, do = "one direction in a set", "keep crossing lines in a set of their own"
+        else:
+            continue
+        problems.append(Problem(came, allowed=allowed, do=do, file=entry.file, line=entry.line))
+    if problems:
+        raise SurveyError(problems)
+    return common
+
+
+def line_spacing(entries: Sequence[LineEntry], *, direction: Direction) -> float:
+    """Return the nominal line spacing in m.
+
+    The median difference of neighbouring positions across the lines (so that a missing line does not matter), refined
+    by a straight fit of position against row, because tapes read to the centimetre cannot hold a third of a metre.
+    A single line returns :data:`ALONE_M`.
+    """
+    named: dict[tuple[str, str], list[float]] = {}
+    for e in entries:  # the pieces of one line count once
+        named.setdefault((e.grid, e.line), []).append(_across(e, direction))
+    across = _distinct([float(np.mean(pieces)) for pieces in named.values()])
+    if across.size < 2:
+        return ALONE_M
+    steps = np.diff(across)
+    rows = np.concatenate([[0.0], np.cumsum(np.round(steps / np.median(steps)))])
+    slope = float(np.polyfit(rows - rows.mean(), across - across.mean(), 1)[0])
+    return round(slope, 6)  # a micrometre: keeps typed spacings as typed
+
+
+def trace_spacing(entries: Sequence[LineEntry]) -> float:
+    """Return the median distance between traces in m (length of a line over its trace intervals).
+
+    Raises
+    ------
+    SurveyError
+        When no line has two traces and a length.
+    """
+    found = []
+    for e in entries:
+        gaps = e.last_trace - e.first_trace
+        length = math.dist(e.start, e.end) * e.along_scale
+        if gaps > 0 and length > 0:
+            found.append(length / gaps)
+    if not found:
+        raise SurveyError(
+            Problem(
+                "no line with two traces and a length",
+                allowed="at least one",
+                do="give trace_spacing_m or correct the register",
+            )
+        )
+    return float(np.median(found))
+
+
+def cube_geometry(
+    entries: Sequence[LineEntry],
+    *,
+    direction: Direction | None = None,
+    line_step_m: float | None = None,
+    along_step_m: float | None = None,
+    time_step_ns: float,
+    n_time: int,
+    time0_ns: float,
+) -> CubeGeometry:
+    """Return the regular axes of one set.
+
+    Parameters
+    ----------
+    entries
+        The set's lines; starts and ends in local m.
+    direction
+        Local axis the lines run along; None finds it (:func:`set_direction`).
+    line_step_m, along_step_m
+        Steps in m; None takes the nominal line spacing and the median trace spacing.
+    time_step_ns, n_time, time0_ns
+        Time axis; ``time0_ns`` is at or a little before time zero.
+
+    Returns
+    -------
+    CubeGeometry
+        The line axis holds every row from the first to the last line, the along axis the smallest to the largest of
+        all starts and ends.
+
+    Raises
+    ------
+    SurveyError
+        For oblique or mixed lines, or a step that is not positive.
+    """
+    way = set_direction(entries) if direction is None else direction
+    step = line_spacing(entries, direction=way) if line_step_m is None else line_step_m
+    along_step = trace_spacing(entries) if along_step_m is None else along_step_m
+    for name, value in (("line_step_m", step), ("along_step_m", along_step), ("time_step_ns", time_step_ns)):
+        if not (math.isfinite(value) and value > 0):
+            raise SurveyError(Problem(f"{name} is {value:g}", allowed="a positive number", key=name))
+    across = np.array([_across(e, way) for e in entries])
+    first = float(across.min())
+    rows = np.round((across - first) / step)
+    # The row axis goes through the middle of all lines, not through a first line that may be off.
+    line0 = first + float(np.median(across - first - rows * step))
+    rows = np.round((across - line0) / step)
+    line0 = round(line0 + float(rows.min()) * step, 6)
+    ends = np.array([[_along(e.start, way), _along(e.end, way)] for e in entries])
+    along0, along1 = float(ends.min()), float(ends.max())
+    return CubeGeometry(
+        direction=way,
+        line0_m=line0,
+        line_step_m=step,
+        n_lines=int(rows.max() - rows.min()) + 1,
+        along0_m=along0,
+        along_step_m=along_step,
+        n_along=math.ceil((along1 - along0) / along_step - 1e-6) + 1,
+        time0_ns=time0_ns,
+        time_step_ns=time_step_ns,
+        n_time=n_time,
+    )
+
+
+def place_rows(
+    entries: Sequence[LineEntry], geometry: CubeGeometry
+) -> tuple[tuple[LineEntry, ...], tuple[Problem, ...]]:
+    """Return the entries with their ``row`` set, and a warning for every line more than 0.1 spacing off its row.
+
+    The row is the nearest one to the middle of the line; both ends count for the warning. Rows without an entry
+    simply stay empty.
+
+    Raises
+    ------
+    SurveyError
+        When a line lies outside the geometry's rows.
+    """
+    placed, problems, outside = [], [], []
+    for e in entries:
+        row = round((_across(e, geometry.direction) - geometry.line0_m) / geometry.line_step_m)
+        if not 0 <= row < geometry.n_lines:
+            outside.append(
+                Problem(
+                    f"line {e.line} of grid {e.grid} lies on row {row}",
+                    allowed=f"rows 0 to {geometry.n_lines - 1}",
+                    file=e.file,
+                    line=e.line,
+                )
+            )
+            continue
+        here = geometry.line0_m + row * geometry.line_step_m
+        side = 1 if geometry.direction == "x" else 0
+        off = max(abs(p[side] - here) for p in (e.start, e.end))
+        if off > _OFF_ROW * geometry.line_step_m + 1e-9:
+            problems.append(
+                Problem(
+                    f"line {e.line} of grid {e.grid} is {off:.3f} m off its row at {here:.3f} m",
+                    allowed=f"within {_OFF_ROW * geometry.line_step_m:.3f} m (a tenth of the spacing)",
+                    do="check its start and end in the register",
+                    file=e.file,
+                    line=e.line,
+                    severity="warning",
+                )
+            )
+        placed.append(e if e.row == row else e.model_copy(update={"row": row}))
+    if outside:
+        raise SurveyError(outside)
+    return tuple(placed), tuple(problems)
+
+
+def _along(point: Sequence[float], direction: Direction) -> float:
+    return point[0] if direction == "x" else point[1]
+
+
+def _across(entry: LineEntry, direction: Direction) -> float:
+    side = 1 if direction == "x" else 0
+    return (entry.start[side] + entry.end[side]) / 2.0
+
+
+def _distinct(values: Sequence[float]) -> np.ndarray:
+    """Sorted values; those closer than a centimetre to their neighbour are one (pieces, repeated lines)."""
+    ordered = np.sort(np.asarray(values, float))
+    groups = np.split(ordered, np.flatnonzero(np.diff(ordered) > _SAME_M) + 1)
+    return np.array([g.mean() for g in groups])
+
+
+def _point(p: Sequence[float]) -> str:
+    return f"({p[0]:g}, {p[1]:g})"
