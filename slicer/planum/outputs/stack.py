@@ -80,7 +80,7 @@ def write_stack(path: Path, slices: xr.Dataset, statements: Sequence[Statement])
 
 def _overviews(path: Path, largest: int) -> None:
     """Add averaged overviews until the smallest fits one block, so that a GIS opens large sites at once."""
-    factors = []
+    factors: list[int] = []
     while largest > _BLOCK:
         factors.append(2 ** (len(factors) + 1))
         largest = -(-largest // 2)
