@@ -1,0 +1,191 @@
+"""How the command speaks: results on standard output, everything else on standard error.
+
+::
+
+    Talk
+     ├ result   what was asked for: stdout
+     ├ say      where we are: stderr, silent with --quiet
+     ├ tell     a problem as one line: stderr, always
+     ├ next     the next useful command: stderr, silent with --quiet
+     └ progress a live bar on a terminal, a line at every quarter elsewhere
+"""
+
+from __future__ import annotations
+
+import os
+import sys
+import time
+import warnings
+from collections.abc import Iterable, Iterator
+from contextlib import contextmanager
+from typing import Any
+
+import click
+from planum.errors import PlanumWarning, Problem, printable
+
+__all__ = ["Talk", "aligned"]
+
+BAR = 24
+"""Characters of the live bar."""
+REDRAW_S = 0.1
+"""A live bar is redrawn at most ten times a second."""
+
+
+def aligned(pairs: Iterable[tuple[str, object]], *, indent: int = 0) -> str:
+    """Return label and value per line, the values below each other."""
+    rows = [(str(label), printable(value, longest=2000)) for label, value in pairs]
+    wide = max((len(label) for label, _ in rows), default=0)
+    return "\n".join(f"{' ' * indent}{label:<{wide}}  {value}".rstrip() for label, value in rows)
+
+
+class Progress:
+    """Told ``(stage, done, total)`` as often as one likes; speaks only when a person gains by it."""
+
+    def __init__(self, *, live: bool, quiet: bool) -> None:
+        self._live, self._quiet = live, quiet
+        self._stage = ""
+        self._quarter = -1
+        self._began = self._drawn = 0.0
+        self._width = 0
+
+    def __call__(self, stage: str, done: int, total: int) -> None:
+        """Show that ``done`` of ``total`` of a stage is finished (``total`` 0: not known)."""
+        if self._quiet:
+            return
+        now = time.monotonic()
+        new = stage != self._stage
+        if new:
+            self.close()
+            self._stage, self._quarter, self._began, self._drawn = stage, -1, now, 0.0
+        if self._live:
+            if new or done >= total or now - self._drawn >= REDRAW_S:
+                self._drawn = now
+                self._draw(done, total, now - self._began)
+        else:
+            self._line(done, total, now - self._began)
+
+    def clear(self) -> None:
+        """Take the live bar off the terminal, so that a line can be written; the next call draws it again."""
+        if self._width:
+            _to_stderr("\r" + " " * self._width + "\r", newline=False)
+            self._width = 0
+
+    def close(self) -> None:
+        """Leave the finished bar standing and go to the next line."""
+        if self._width:
+            _to_stderr("")
+            self._width = 0
+
+    def _draw(self, done: int, total: int, seconds: float) -> None:
+        full, empty = ("█", "░") if _speaks_unicode() else ("#", ".")
+        share = min(done / total, 1.0) if total > 0 else 0.0
+        bar = full * round(BAR * share) + empty * (BAR - round(BAR * share))
+        count = f"{done}/{total}" if total > 0 else f"{done}"
+        text = f"{printable(self._stage, longest=28):<28} {bar} {count:>11}  {_clock(seconds)}"
+        _to_stderr("\r" + text.ljust(self._width), newline=False)
+        self._width = len(text)
+
+    def _line(self, done: int, total: int, seconds: float) -> None:
+        quarter = min(4 * done // total, 4) if total > 0 else 0
+        if quarter <= self._quarter:
+            return
+        first = self._quarter < 0
+        self._quarter = quarter
+        if first and quarter == 0:
+            _to_stderr(f"{printable(self._stage)} ..." + (f" ({total})" if total > 0 else ""))
+        else:
+            _to_stderr(f"{printable(self._stage)} {25 * quarter} % ({done} of {total}, {_clock(seconds)})")
+
+
+class Talk:
+    """The command's voice during one call."""
+
+    def __init__(self, *, quiet: bool = False, debug: bool | None = None) -> None:
+        self.quiet = quiet
+        self.debug = os.environ.get("PLANUM_DEBUG", "") not in ("", "0") if debug is None else debug
+        self._progress: Progress | None = None
+        self._said: set[str] = set()
+
+    @property
+    def live(self) -> bool:
+        """Whether standard error is a terminal."""
+        return bool(getattr(sys.stderr, "isatty", lambda: False)())
+
+    def result(self, text: str) -> None:
+        """Write what was asked for."""
+        self._clear()
+        click.echo(text)
+
+    def say(self, text: str) -> None:
+        """Write where we are."""
+        if not self.quiet:
+            self._clear()
+            _to_stderr(text)
+
+    def next(self, *commands: str) -> None:
+        """Name what to do next."""
+        if commands:
+            self.say("next: " + "\n      ".join(commands))
+
+    def tell(self, problem: Problem) -> None:
+        """Write a problem as one line; the same line only once."""
+        line = f"{problem.severity}: {problem}"
+        if line not in self._said:
+            self._said.add(line)
+            self._clear()
+            _to_stderr(line)
+
+    @contextmanager
+    def progress(self) -> Iterator[Progress]:
+        """Give a function to report progress to; its bar ends with the block."""
+        self._progress = Progress(live=self.live, quiet=self.quiet)
+        try:
+            yield self._progress
+        finally:
+            self._progress.close()
+            self._progress = None
+
+    @contextmanager
+    def warnings(self) -> Iterator[None]:
+        """Show this library's warnings as sentences, once each, and others only with ``--debug``."""
+        with warnings.catch_warnings():
+            warnings.simplefilter("default" if self.debug else "ignore")
+            warnings.simplefilter("always", PlanumWarning)
+            usual = warnings.showwarning
+
+            def show(message: Warning | str, category: type[Warning], *rest: Any, **named: Any) -> None:
+                if isinstance(message, PlanumWarning):
+                    self.tell(message.problem)
+                elif issubclass(category, PlanumWarning):
+                    self.tell(Problem(str(message), severity="warning"))
+                elif self.debug:
+                    self._clear()
+                    usual(message, category, *rest, **named)
+
+            warnings.showwarning = show
+            yield
+
+    def _clear(self) -> None:
+        if self._progress is not None:
+            self._progress.clear()
+
+
+def _clock(seconds: float) -> str:
+    minutes, rest = divmod(int(seconds), 60)
+    hours, minutes = divmod(minutes, 60)
+    return f"{hours}:{minutes:02d}:{rest:02d}" if hours else f"{minutes}:{rest:02d}"
+
+
+def _speaks_unicode() -> bool:
+    try:
+        "█░".encode(getattr(sys.stderr, "encoding", None) or "ascii")
+    except (UnicodeEncodeError, LookupError):
+        return False
+    return True
+
+
+def _to_stderr(text: str, *, newline: bool = True) -> None:
+    try:
+        click.echo(text, err=True, nl=newline)
+    except BrokenPipeError:
+        pass  # nobody reads the progress any more: that is no reason to stop the work
