@@ -18,7 +18,7 @@ from pydantic_core import PydanticCustomError
 from planum.constants import VELOCITY_RANGE
 from planum.errors import nearest
 from planum.survey.frames import check_crs
-from planum.survey.safety import is_device
+from planum.survey.safety import is_device, posix
 
 __all__ = [
     "DEFAULT_STEPS",
@@ -185,11 +185,16 @@ class RawTable(Table):
 
     header_bytes: int = Field(ge=0, le=10**9, description="bytes before the first trace")
     samples: int = Field(ge=2, le=1_000_000, description="samples in one trace")
-    trace_header_bytes: int = Field(0, ge=0, le=10**6, description="bytes before the samples of each trace")
+    bytes_before_trace: int = Field(0, ge=0, le=10**6, description="bytes before the samples of each trace")
     sample_type: Literal["int8", "uint8", "int16", "uint16", "int32", "uint32", "float32", "float64"] = Field(
         description="type of one sample"
     )
     byte_order: Literal["little", "big"] = Field("little", description="which byte of a sample comes first")
+
+    @property
+    def byte_order_mark(self) -> Literal["<", ">"]:
+        """The byte order as array types spell it."""
+        return "<" if self.byte_order == "little" else ">"
 
 
 class Grid(Table):
@@ -224,13 +229,18 @@ class Grid(Table):
     trace_spacing_m: Metres | None = Field(None, description="from trace to trace, m")
     cell_m: Metres | None = Field(None, description="cell of the plan grid, m")
     positions: Literal["register", "header"] = Field("register", description="where trace positions come from")
-    split: Literal["fieldrecord", "ensemble", "inline", "crossline", "counter"] | None = Field(
+    split: Literal["fieldrecord", "trace_number", "point", "ensemble", "inline", "crossline", "counter"] | None = Field(
         None, description="the header field that tells the lines of one file apart"
     )
     channels: str | None = Field(None, description="the channels of an antenna array")
     raw: RawTable | None = Field(None, description="layout of raw binary line files")
 
     model_config = ConfigDict(populate_by_name=True)
+
+    @property
+    def register_name(self) -> str:
+        """The register as a plain relative path; ``lines.csv`` when none is named."""
+        return posix(self.register_file or "lines.csv")
 
     @classmethod
     def contradictions(cls, values: Mapping[str, Any]) -> Iterator[Mistake]:

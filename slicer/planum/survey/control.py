@@ -6,8 +6,8 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
-from planum.errors import Problem, SurveyError, nearest
-from planum.survey.config import SurveyConfig
+from planum.errors import Problem, SurveyError
+from planum.survey.names import Names
 from planum.survey.table import Row, read_sheet
 
 __all__ = ["ControlPoint", "read_control"]
@@ -32,7 +32,7 @@ class ControlPoint:
 
 
 def read_control(
-    folder: Path, config: SurveyConfig, *, name: str = "control.csv", roots: Sequence[Path] = ()
+    folder: Path, names: Names, *, name: str = "control.csv", roots: Sequence[Path] = ()
 ) -> tuple[ControlPoint, ...]:
     """Return the control points of a survey, in the order of the file.
 
@@ -45,8 +45,10 @@ def read_control(
     points: list[ControlPoint] = []
     seen: dict[tuple[str, str], int] = {}
     for row in sheet.rows:
+        if sheet.full():
+            break
         before = len(sheet.problems)
-        point = _point(row, config)
+        point = _point(row, names)
         where = (point.grid, point.point.casefold())
         if point.point and where in seen:
             sheet.complain(
@@ -66,23 +68,12 @@ def read_control(
     return tuple(points)
 
 
-def _point(row: Row, config: SurveyConfig) -> ControlPoint:
+def _point(row: Row, names: Names) -> ControlPoint:
     x, y, east, north = (row.number(column) for column in NEEDED[1:])
     accuracy = row.number("accuracy_m", needed=False)
     if accuracy is not None and accuracy <= 0:
         row.sheet.complain(row, "accuracy_m", f"accuracy_m is {accuracy:g}", "a positive number of metres")
-    grid = row.text("grid")
-    if grid:
-        try:
-            grid = config.grid_named(grid).name
-        except KeyError:
-            row.sheet.complain(
-                row,
-                "grid",
-                f"no [[grid]] is called {grid!r}",
-                nearest(grid, {g.name for g in config.grid}),
-                "leave it blank for the site grid",
-            )
+    grid = names.grid(row) if row.text("grid") else None
     return ControlPoint(
         point=row.needed("point"),
         local_x_m=x or 0.0,
@@ -90,7 +81,7 @@ def _point(row: Row, config: SurveyConfig) -> ControlPoint:
         easting_m=east or 0.0,
         northing_m=north or 0.0,
         elevation_m=row.number("elevation_m", needed=False),
-        grid=grid,
+        grid=grid.name if grid else "",
         accuracy_m=accuracy,
         source=row.source,
     )

@@ -2,9 +2,9 @@
 
 from __future__ import annotations
 
+import math
 from collections import defaultdict
 from collections.abc import Iterator, Sequence
-from itertools import pairwise
 
 from planum.errors import Problem
 from planum.survey.register import RegisterRow
@@ -36,8 +36,7 @@ def check_places(rows: Sequence[RegisterRow]) -> list[Problem]:
             by_grid[row.grid].append(row)
         else:
             problems.append(
-                _problem(
-                    row,
+                row.problem(
                     "end_x_m",
                     f"line {row.grid}/{row.line} is not parallel to local x or y",
                     "lines at an angle to the local axes are not supported yet",
@@ -56,17 +55,11 @@ def check_places(rows: Sequence[RegisterRow]) -> list[Problem]:
     return problems
 
 
-def _problem(row: RegisterRow, key: str, came: str, allowed: str = "", do: str = "") -> Problem:
-    file, _, line = row.source.rpartition(" line ")
-    return Problem(came, allowed, do, file=file, line=line, key=key)
-
-
 def _one_direction(grid: str, rows: Sequence[RegisterRow]) -> Iterator[Problem]:
     first = rows[0]
     for row in rows:
         if direction(row) != direction(first):
-            yield _problem(
-                row,
+            yield row.problem(
                 "end_x_m",
                 f"grid {grid} has lines along {direction(first)} (line {first.line}) and along {direction(row)}"
                 f" (line {row.line})",
@@ -81,18 +74,22 @@ def _one_recording(rows: Sequence[RegisterRow]) -> Iterator[Problem]:
     by_file: dict[tuple[str, int | None, int | None], list[RegisterRow]] = defaultdict(list)
     for row in rows:
         by_file[row.file, row.part, row.channel].append(row)
+
+    def last(row: RegisterRow) -> float:
+        return math.inf if row.last_trace is None else row.last_trace
+
     for own in by_file.values():
-        ordered = sorted(own, key=lambda r: (r.first_trace or 0, r.last_trace is None, r.last_trace or 0))
-        for a, b in pairwise(ordered):
-            if a.last_trace is None or (b.first_trace or 0) <= a.last_trace:
-                a_where = a.source.rpartition(" line ")[2]
-                yield _problem(
-                    b,
+        ordered = sorted(own, key=lambda r: (r.first_trace or 0, last(r)))
+        furthest = ordered[0]
+        for row in ordered[1:]:
+            if (row.first_trace or 0) <= last(furthest):
+                yield row.problem(
                     "file",
-                    f"{b.file} is already used in line {a_where}, for {a.grid}/{a.line}",
+                    f"{row.file} is already used for line {furthest.grid}/{furthest.line} ({furthest.source})",
                     "the same traces stand in one row only",
-                    "mend the file name, or tell the pieces apart by first_trace and last_trace, or part",
+                    "mend the file name, or tell the pieces apart by first_trace and last_trace, or by part",
                 )
+            furthest = max(furthest, row, key=last)
 
 
 def _one_place(rows: Sequence[RegisterRow]) -> Iterator[Problem]:
@@ -113,23 +110,24 @@ def _one_place(rows: Sequence[RegisterRow]) -> Iterator[Problem]:
     for own in lines.values():
         for row in own[1:]:
             if abs(across(row) - across(own[0])) > 2 * OFF_AXIS_M:
-                yield _problem(
-                    row,
+                yield row.problem(
                     "line",
                     f"line {row.grid}/{row.line} stands at {across(own[0]):g} m and at {across(row):g} m",
                     "the pieces of a line lie in one row",
                     "mend the line's number or its place",
                 )
-    for own in [*places.values()]:
-        for a, b in pairwise(sorted(own, key=extent)):
-            shared = min(extent(a)[1], extent(b)[1]) - extent(b)[0]
-            if shared > max(OVERLAP_M, OVERLAP_SHARE * min(a.length_m, b.length_m)):
-                same = a.line.casefold() == b.line.casefold()
-                yield _problem(
-                    b,
+    for own in places.values():
+        ordered = sorted(own, key=extent)
+        furthest = ordered[0]
+        for row in ordered[1:]:
+            shared = min(extent(furthest)[1], extent(row)[1]) - extent(row)[0]
+            if shared > max(OVERLAP_M, OVERLAP_SHARE * min(furthest.length_m, row.length_m)):
+                same = row.line.casefold() == furthest.line.casefold()
+                other = "its other piece" if same else f"line {furthest.line}"
+                yield row.problem(
                     "line",
-                    f"line {b.grid}/{b.line} covers {shared:.2f} m of the place of "
-                    + (f"its row in {a.source}" if same else f"line {a.line} ({a.source})"),
+                    f"line {row.grid}/{row.line} covers {shared:.2f} m of {other} ({furthest.source})",
                     "each place is recorded once per radar and visit",
                     "put the number of the good line in superseded_by of the other, or mend the places",
                 )
+            furthest = max(furthest, row, key=lambda r: extent(r)[1])

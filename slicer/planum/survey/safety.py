@@ -8,19 +8,22 @@ from __future__ import annotations
 
 import codecs
 import re
+import unicodedata
 from collections.abc import Sequence
 from dataclasses import replace
 from pathlib import Path, PurePosixPath
 
 from planum.errors import Problem, SurveyError
 
-__all__ = ["inside", "is_device", "natural_key", "posix", "read_text_capped"]
+__all__ = ["inside", "is_device", "is_file", "natural_key", "posix", "read_text_capped"]
 
 LONGEST_PATH = 1000
 MOST_TOML_BYTES = 1_000_000
 MOST_TABLE_BYTES = 16_000_000
 """About 200 000 register rows: ten times the largest surveys known to us."""
 
+_UNSEEN = frozenset({"Cc", "Cf", "Cs", "Zl", "Zp"})
+"""Unicode's control, format (reversing), surrogate and line-breaking characters."""
 _RELATIVE = "a path relative to the survey folder, with the file inside it"
 _DEVICES = frozenset({"con", "prn", "aux", "nul", "conin$", "conout$"}) | {
     f"{port}{n}" for port in ("com", "lpt") for n in "0123456789¹²³"
@@ -56,8 +59,8 @@ def _check_words(text: str) -> str:
         raise _refused(text, "is empty")
     if len(text) > LONGEST_PATH:
         raise _refused(text[:40] + "…", f"has {len(text)} characters, more than {LONGEST_PATH}")
-    if not text.isprintable():
-        raise _refused(text, "holds control characters")
+    if any(unicodedata.category(c) in _UNSEEN for c in text):
+        raise _refused(text, "holds control characters", "rename the file")
     plain = text.strip().replace("\\", "/")
     if plain.lower().startswith(("/vsi", "vsi:")):
         raise _refused(text, "is a virtual path")
@@ -148,7 +151,5 @@ def _decode(data: bytes, name: str) -> str:
     except UnicodeDecodeError:
         text = data.decode("cp1252", errors="replace")
     if "\0" in text:
-        raise SurveyError(
-            Problem(f"{name} is not text", "UTF-8 text is expected", "save it as text", name, byte=data.find(b"\0"))
-        )
+        raise SurveyError(Problem(f"{name} is not text", "UTF-8 text is expected", "save it as text", file=name))
     return text.replace("\r\n", "\n").replace("\r", "\n")

@@ -21,6 +21,8 @@ __all__ = ["Row", "Sheet", "read_sheet"]
 _NUMBER = re.compile(r"[+-]?([0-9]+\.?[0-9]*|\.[0-9]+)([eE][+-]?[0-9]{1,3})?")
 _GROUPED = re.compile(r"[+-]?[0-9]{1,3}([ '][0-9]{3})+(?![0-9])")
 _LARGEST = 1e9
+MOST_PROBLEMS = 300
+_AND_MORE = "more problems are not listed"
 
 
 @dataclass
@@ -32,9 +34,15 @@ class Sheet:
     problems: list[Problem] = field(default_factory=list)
     decimal: str = "."
 
+    def full(self) -> bool:
+        """Whether there are so many problems that more would not help; says so once."""
+        if len(self.problems) >= MOST_PROBLEMS and self.problems[-1].came != _AND_MORE:
+            self.problems.append(Problem(_AND_MORE, "", "mend the first ones and try again", file=self.file))
+        return len(self.problems) >= MOST_PROBLEMS
+
     def complain(self, row: Row | None, column: str, came: str, allowed: str = "", do: str = "") -> None:
         """Keep a problem of one cell."""
-        line = str(row.line) if row is not None else "1"
+        line = str(row.line) if row is not None else ""
         self.problems.append(Problem(came, allowed, do, file=self.file, line=line, key=column))
 
 
