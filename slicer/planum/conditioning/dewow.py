@@ -10,6 +10,9 @@ from planum.schema import regular_step
 
 __all__ = ["dewow", "dewow_kernel", "odd_window"]
 
+_BLOCK = 256
+"""Traces summed at a time: they stay in cache."""
+
 
 def odd_window(window_ns: float, step_ns: float) -> int:
     """Return the odd number of samples, 3 at least, nearest to ``window_ns``."""
@@ -24,11 +27,18 @@ def dewow_kernel(data: np.ndarray, *, window: int) -> np.ndarray:
     """
     n = data.shape[-1]
     half = min(window // 2, n)
-    total = np.zeros((*data.shape[:-1], n + 1))
-    np.cumsum(data, axis=-1, dtype=np.float64, out=total[..., 1:])
     i = np.arange(n)
-    low, high = np.maximum(i - half, 0), np.minimum(i + half + 1, n)
-    return (data - (total[..., high] - total[..., low]) / (high - low)).astype(np.float32)
+    count = np.minimum(i + half + 1, n) - np.maximum(i - half, 0)
+    flat = data.reshape(-1, n)
+    out = np.empty(flat.shape, np.float32)
+    total = np.zeros((_BLOCK, n + 2 * half + 1))  # held beyond both ends
+    for k in range(0, flat.shape[0], _BLOCK):
+        part = flat[k : k + _BLOCK]
+        sums = total[: part.shape[0]]
+        np.cumsum(part, axis=-1, dtype=np.float64, out=sums[:, half + 1 : half + 1 + n])
+        sums[:, half + 1 + n :] = sums[:, half + n, None]
+        out[k : k + _BLOCK] = part - (sums[:, 2 * half + 1 :] - sums[:, :n]) / count
+    return out.reshape(data.shape)
 
 
 def dewow(cube: xr.DataArray, *, window_ns: float) -> xr.DataArray:

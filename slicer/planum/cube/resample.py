@@ -21,6 +21,9 @@ _BETA = 6.0
 
 _NEAR = 1e-9
 
+_BLOCK = 256
+"""Traces transformed at a time: they stay in cache."""
+
 
 def sinc_weights(u: np.ndarray, n: int, *, scale: float | np.ndarray = 1.0) -> scipy.sparse.csr_matrix:
     """Return the (len(u), n) matrix that reads ``n`` regular samples at fractional indices ``u``.
@@ -110,28 +113,44 @@ def shift_time(data: np.ndarray, samples: np.ndarray, start: int, n: int) -> np.
     part[np.abs(part) < _NEAR] = 0.0
     moved = np.asarray(data, np.float32)
     if part.any():
-        ramp = np.linspace(0.0, 1.0, m, dtype=np.float32)
-        first, last = moved[:, :1], moved[:, -1:]
-        line = first + (last - first) * ramp
-        size = scipy.fft.next_fast_len(m + max(64, m // 4), real=True)
-        spectrum = scipy.fft.rfft(moved - line, n=size, axis=1)
-        f = np.arange(spectrum.shape[1]) / size
-        phase = np.exp(2j * np.pi * part[:, None] * f).astype(np.complex64)
-        if size % 2 == 0:
-            phase[:, -1] = phase[:, -1].real
-        slope = (last - first) / max(m - 1, 1) * part[:, None].astype(np.float32)
-        shifted = scipy.fft.irfft(spectrum * phase, n=size, axis=1)[:, :m] + line + slope
-        moved = np.where(part[:, None] != 0.0, shifted, moved).astype(np.float32)
-    at = whole.astype(np.int64)[:, None] + start + np.arange(n)
+        moved = np.concatenate(
+            [_by_phase(moved[i : i + _BLOCK], part[i : i + _BLOCK]) for i in range(0, moved.shape[0], _BLOCK)]
+        )
     # A shifted record ends up to one sample earlier: its last value would lie beyond the recorded ones.
-    end = np.where(part > 0.0, m - 2, m - 1)[:, None]
-    out = np.take_along_axis(moved, np.clip(at, 0, np.maximum(end, 0)), axis=1)
-    beyond = np.maximum(-at, at - end)
-    outside = beyond > 0
-    if outside.any():
-        fade = 0.5 + 0.5 * np.cos(np.pi * np.minimum(beyond, FADE) / FADE)
-        out = np.where(outside, out * fade, out)
-    return out.astype(np.float32)
+    end = np.maximum(np.where(part > 0.0, m - 2, m - 1), 0)
+    out = np.empty((data.shape[0], n), np.float32)
+    kinds, which = np.unique(np.stack([whole, end]), axis=1, return_inverse=True)  # one or two, unless zero drifts
+    for kind in range(kinds.shape[1]):
+        first, last = int(kinds[0, kind]), int(kinds[1, kind])
+        mine = slice(None) if kinds.shape[1] == 1 else np.flatnonzero(which.ravel() == kind)
+        at = first + start + np.arange(n)
+        fade = 0.5 + 0.5 * np.cos(np.pi * np.clip(np.maximum(-at, at - last), 0, FADE) / FADE)
+        a, b = np.searchsorted(at, [0, last + 1])  # output places that are recorded
+        source = moved[mine]
+        out[mine, :a] = source[:, :1] * fade[:a]
+        out[mine, a:b] = source[:, at[a] : at[b - 1] + 1] if b > a else 0.0
+        out[mine, b:] = source[:, last : last + 1] * fade[b:]
+    return out
+
+
+def _by_phase(data: np.ndarray, part: np.ndarray) -> np.ndarray:
+    """Samples of each trace (float32) at index + ``part`` (0..1)."""
+    m = data.shape[1]
+    ramp = np.linspace(0.0, 1.0, m, dtype=np.float32)
+    first, rise = data[:, :1], data[:, -1:] - data[:, :1]
+    line = first + rise * ramp
+    size = scipy.fft.next_fast_len(m + max(64, m // 4), real=True)
+    spectrum = scipy.fft.rfft(data - line, n=size, axis=1)
+    values, which = np.unique(part, return_inverse=True)  # mostly one value: time zero rarely drifts inside a line
+    phase = np.exp(2j * np.pi / size * values[:, None] * np.arange(spectrum.shape[1])).astype(np.complex64)
+    if size % 2 == 0:
+        phase[:, -1] = phase[:, -1].real
+    spectrum *= phase if values.size == 1 else phase[which]
+    line += rise / max(m - 1, 1) * part[:, None].astype(np.float32)
+    line += scipy.fft.irfft(spectrum, n=size, axis=1)[:, :m]
+    still = part == 0.0
+    line[still] = data[still]
+    return line
 
 
 def time_grid(n_in: int, first: float, step: float, n_out: int) -> scipy.sparse.csr_matrix:
