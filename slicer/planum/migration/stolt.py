@@ -40,6 +40,7 @@ __all__ = [
     "mark_rim",
     "rim_m",
     "stolt",
+    "stolt_analytic",
     "stolt_kernel",
     "stolt_map",
     "stolt_table",
@@ -196,15 +197,30 @@ def stolt_kernel(data: np.ndarray, table: StoltTable) -> np.ndarray:
     ndarray
         (n_along, n_time) float32, migrated two-way time.
     """
+    return _uncentre(fft.irfft(_image(data, table), n=table.n_t, axis=1, overwrite_x=True), table.n_time)
+
+
+def stolt_analytic(data: np.ndarray, table: StoltTable) -> np.ndarray:
+    """Migrate one line to its analytic signal; the modulus is the envelope, the real part :func:`stolt_kernel`.
+
+    Parameters and shapes as there; complex64. Negative frequencies are never made, so no Hilbert transform is needed.
+    """
+    spectrum = np.zeros((table.n_along, table.n_t), np.complex64)
+    spectrum[:, : table.phase.shape[1]] = _image(data, table)
+    spectrum *= 2.0  # the constant term is 0: its Jacobian is
+    return _uncentre(fft.ifft(spectrum, axis=1, overwrite_x=True), table.n_time)
+
+
+def _image(data: np.ndarray, table: StoltTable) -> np.ndarray:
+    """Return the migrated image (n_along, output bin): space along the line, frequency in time."""
     spectrum = _forward(data, table)
     pairs, n_out = table.phase.shape
     image = (table.matrix @ spectrum).view(np.complex64).reshape(pairs, n_out, 2)
     image *= table.phase[:, :, None]
     both = np.zeros((table.n_x, n_out), np.complex64)
     both[:pairs] = image[:, :, 0]
-    both[table.n_x - pairs + 1 :] = image[:0:-1, :, 1]  # a pair shared by +kx and -kx at Nyquist holds the same twice
-    back = fft.ifft(both, axis=0, overwrite_x=True)[: table.n_along]
-    return _uncentre(fft.irfft(back, n=table.n_t, axis=1, overwrite_x=True), table.n_time)
+    both[table.n_x - pairs + 1 :] = image[:0:-1, :, 1]  # at Nyquist, +kx and -kx are one row and hold the same
+    return fft.ifft(both, axis=0, overwrite_x=True)[: table.n_along]
 
 
 def _forward(data: np.ndarray, table: StoltTable) -> np.ndarray:
