@@ -168,6 +168,8 @@ class Facts(Record):
     spectrum_step_ghz: float
     noise: float = Field(description="median envelope over the last tenth of the window")
     direct: float = Field(description="envelope of the typical trace's direct wave")
+    first_xy: tuple[float, float] | None = Field(None, description="header position of the first trace, m")
+    last_xy: tuple[float, float] | None = None
     header: dict[str, Any] = {}
     problems: tuple[dict[str, Any], ...] = ()
 
@@ -285,6 +287,8 @@ class SetPlan(Record):
     geometry: CubeGeometry
     centre_frequency_ghz: float
     separation_m: float
+    interval_ns: float = Field(description="sample interval of the recordings")
+    reader: dict[str, Any] = Field({}, description="how the line files are read: split, layout, reader")
     zero: Estimate
     velocity: Velocity
     chain: tuple[StepSpec, ...]
@@ -382,9 +386,9 @@ class Statement(Record):
         return (
             f"{self.quantity}, {self.statistic} from {self.top_m:.2f} to {self.bottom_m:.2f} m"
             f" (± {self.depth_error_m:.2f} m) below {self.surface}, visit {self.date};"
-            f" velocity {self.velocity_m_per_ns:.4f} ± {self.velocity_error_m_per_ns:.4f} m/ns ({self.velocity_origin});"
-            f" time zero: {self.zero_rule}, ± {self.zero_error_ns:.2f} ns; {self.migration}; {self.fill}; {self.coverage_rule}; {self.resolution};"
-            f" {self.stretch}."
+            f" velocity {self.velocity_m_per_ns:.4f} ± {self.velocity_error_m_per_ns:.4f} m/ns"
+            f" ({self.velocity_origin}); time zero: {self.zero_rule}, ± {self.zero_error_ns:.2f} ns;"
+            f" {self.migration}; {self.fill}; {self.coverage_rule}; {self.resolution}; {self.stretch}."
         )
 
     def _texts(self) -> dict[str, str]:

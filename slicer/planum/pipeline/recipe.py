@@ -1,0 +1,124 @@
+"""The recipe: which steps run in which order, with which settings.
+
+What the survey leaves out is filled in from the site's own facts and then written out, so that a resolved recipe holds
+every number.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import replace
+from typing import Any
+
+from pydantic import BaseModel, ValidationError
+
+from planum.engine.steps import check_order, get_step
+from planum.errors import Problem, RecipeError, nearest
+from planum.records import SetFacts, StepSpec
+from planum.survey.config import DEFAULT_STEPS
+
+__all__ = ["resolve_chain", "settings", "toml"]
+
+
+def settings(recipe: Mapping[str, Any], *, file: str = "survey.toml") -> dict[str, BaseModel]:
+    """Return the recipe's steps in order with their settings checked.
+
+    Parameters
+    ----------
+    recipe : mapping
+        ``steps`` and one table per step, as written in the survey.
+    file : str
+        Named in messages.
+
+    Raises
+    ------
+    RecipeError
+        With all mistakes: unknown steps, settings for a step that is not in the recipe, values out of bounds, an
+        impossible order.
+    """
+    names = list(recipe.get("steps") or DEFAULT_STEPS)
+    tables = {k: v for k, v in recipe.items() if k != "steps"}
+    check_order(names)
+    problems = [
+        Problem(
+            came=f"settings for {name!r}, which is not among the steps",
+            allowed=nearest(name, names),
+            do="mend the name or add the step",
+            file=file,
+            key=f"recipe.{name}",
+        )
+        for name in tables
+        if name not in names
+    ]
+    out: dict[str, BaseModel] = {}
+    for name in names:
+        model = get_step(name).Params
+        try:
+            out[name] = model.model_validate(tables.get(name, {}))
+        except ValidationError as fault:
+            problems += [_problem(e, name, model, file) for e in fault.errors()]
+    if problems:
+        raise RecipeError(problems)
+    return out
+
+
+def _problem(error: Any, step: str, model: type[BaseModel], file: str) -> Problem:
+    key = ".".join([f"recipe.{step}", *(str(p) for p in error["loc"])])
+    if error["type"] == "extra_forbidden":
+        return Problem(
+            came=f"unknown setting {error['loc'][-1]!r}",
+            allowed=nearest(str(error["loc"][-1]), model.model_fields),
+            do="mend the name",
+            file=file,
+            key=key,
+        )
+    return Problem(came=f"{error['msg']} (got {error['input']!r})", do="mend the value", file=file, key=key)
+
+
+def resolve_chain(chosen: Mapping[str, BaseModel], facts: SetFacts, *, until: str | None = None) -> tuple[StepSpec, ...]:
+    """Fill in what is automatic from the set's facts, step by step, and return the chain as plain numbers.
+
+    Each step learns from the typical traces as they arrive at it. ``until`` stops before the step of that name.
+    """
+    chain: list[StepSpec] = []
+    for name, params in chosen.items():
+        if name == until:
+            break
+        step = get_step(name)
+        learn = getattr(step, "learn", None)
+        if learn is not None:
+            params = learn(facts, params)
+        spec = StepSpec(name=name, version=step.version, params=params.model_dump(mode="json"))
+        chain.append(spec)
+        if step.reach == "trace" and step.gives == "voltage":
+            facts = replace(facts, typical=step(facts.typical, **spec.params))
+    return tuple(chain)
+
+
+def toml(chain: Sequence[StepSpec]) -> str:
+    """Return a resolved chain as the recipe a person can paste into survey.toml; long curves are summarised."""
+    rows = ["[recipe]", f"steps = [{', '.join(repr(s.name).replace(chr(39), chr(34)) for s in chain)}]"]
+    for spec in chain:
+        if not spec.params:
+            continue
+        rows += ["", f"[recipe.{spec.name}]"]
+        for name, value in spec.params.items():
+            rows.append(_toml_row(name, value))
+    return "\n".join(rows) + "\n"
+
+
+def _toml_row(name: str, value: Any) -> str:
+    if value is None:
+        return f"# {name}: not set"
+    if isinstance(value, (list, tuple)):
+        size = "×".join(str(n) for n in _shape(value))
+        return f"# {name}: {size} learned values, kept in run.json"
+    if isinstance(value, bool):
+        return f"{name} = {str(value).lower()}"
+    if isinstance(value, (int, float)):
+        return f"{name} = {value:.6g}" if isinstance(value, float) else f"{name} = {value}"
+    return f'{name} = "{value}"'
+
+
+def _shape(value: Any) -> list[int]:
+    return [len(value), *(_shape(value[0]) if value else [])] if isinstance(value, (list, tuple)) else []
