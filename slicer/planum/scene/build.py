@@ -13,10 +13,14 @@ from planum.constants import CAUTIONS
 from planum.scene.frame import Frame, frame_of
 from planum.scene.volume import Block, block_from, contour, plane
 
-__all__ = ["ISO_QUANTILE", "Scene", "build_scene"]
+__all__ = ["ISO_QUANTILES", "Scene", "build_scene"]
 
-ISO_QUANTILE = 0.97
-"""Share of the known cells weaker than the default isosurface: buried walls fill a few hundredths of the ground."""
+ISO_QUANTILES = (0.5, 0.999)
+"""The default isosurface lies halfway between these quantiles of the known cells: half height is where a body's edge
+is usually read, and neither quantile heeds a few wild cells."""
+SPECK_CELLS = 5
+"""Bodies less wide in plan are left out: a cell is a fifth of the line spacing by default, and what one line alone
+has seen has no shape."""
 STRETCH = (0.02, 0.995)
 """Quantiles of the known cells drawn lightest and darkest, one stretch for all depths."""
 SHAPE = 0.16
@@ -58,7 +62,9 @@ class Scene:
 
     def at_level(self, level: float) -> Scene:
         """Return the scene with its isosurface at another level."""
-        return replace(self, level=level, level_origin="chosen", isosurface=contour(self.block, level))
+        return replace(
+            self, level=level, level_origin="chosen", isosurface=contour(self.block, level, least_m=_speck(self.block))
+        )
 
     def at_slice(self, index: int) -> Scene:
         """Return the scene with another slice; indices beyond the ends give the end."""
@@ -72,6 +78,8 @@ class Scene:
 
     def level_text(self) -> str:
         """Return the level of the isosurface and where it comes from."""
+        if self.block.depth.size < 2:
+            return "one slice: no isosurface"
         if self.isosurface.n_cells == 0:
             return f"nothing reaches amplitude {self.level:.3g}"
         return f"isosurface at amplitude {self.level:.3g} ({self.level_origin})"
@@ -79,6 +87,8 @@ class Scene:
     def notes(self) -> tuple[str, ...]:
         """Return what must be known to read the picture: exaggeration, thinning."""
         notes = []
+        if self.isosurface.n_cells:
+            notes.append(f"bodies under {_speck(self.block):.2g} m across left out")
         if self.exaggeration != 1.0:
             notes.append(f"depths drawn {self.exaggeration:g} times taller")
         if self.block.thinned > 1:
@@ -108,7 +118,7 @@ def build_scene(
     lines
         Name and (n, 2) map x, y in m of each recorded line.
     level
-        Amplitude of the isosurface; by default the 0.97 quantile of the known cells.
+        Amplitude of the isosurface; by default halfway between the median and the 0.999 quantile.
     slice_depth
         Depth in m whose slice is drawn (the nearest); by default the depth with the strongest features, measured
         as the 0.99 quantile above the median.
@@ -126,7 +136,8 @@ def build_scene(
         raise ValueError("the slices hold no known cell; there is nothing to draw")
     origin = "chosen"
     if level is None:
-        level, origin = float(np.quantile(known, ISO_QUANTILE)), f"the strongest {1 - ISO_QUANTILE:.0%} of the cells"
+        level = float(np.mean(np.quantile(known, ISO_QUANTILES)))
+        origin = "halfway from the median to the strongest thousandth"
     if exaggeration is None:
         exaggeration = _exaggeration(block)
     if not (np.isfinite(level) and np.isfinite(exaggeration) and exaggeration > 0):
@@ -137,7 +148,7 @@ def build_scene(
         title=str(slices.attrs.get("title", "")),
         code=str(slices.attrs.get("code", "")),
         block=block,
-        isosurface=contour(block, level),
+        isosurface=contour(block, level, least_m=_speck(block)),
         plane=plane(block, index),
         lines=_polylines(lines, block.origin),
         frame=frame_of(block.box, origin=block.origin, exaggeration=exaggeration),
@@ -147,6 +158,10 @@ def build_scene(
         stretch=(low, high if high > low else low + 1.0),
         exaggeration=exaggeration,
     )
+
+
+def _speck(block: Block) -> float:
+    return SPECK_CELLS * block.cell_m * block.thinned
 
 
 def _exaggeration(block: Block) -> float:

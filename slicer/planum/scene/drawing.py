@@ -56,7 +56,8 @@ def draw_plane(plotter: pv.Plotter, scene: Scene, *, scale: float = 1.0) -> Any:
     known = np.flatnonzero(np.isfinite(scene.plane.cell_data["amplitude"]))
     mesh = scene.plane.extract_cells(known).extract_surface(algorithm=None)
     table = pv.LookupTable(values=greys().astype(np.uint8), scalar_range=scene.stretch)
-    west, east, south, north, _, _ = scene.block.box
+    grow = 0.001 * scene.width_m  # a rim in the very edge of the slice would flicker
+    west, south, east, north = (scene.block.box[i] + by for i, by in ((0, -grow), (2, -grow), (1, grow), (3, grow)))
     z = -scene.depth_m
     rim = pv.MultipleLines([(west, south, z), (east, south, z), (east, north, z), (west, north, z), (west, south, z)])
     _put(plotter, rim, scene, name="slice rim", color="#8a9097", line_width=1.4 * scale, lighting=False)
@@ -127,7 +128,7 @@ def light(plotter: pv.Plotter) -> None:
     """Set soft light from the north-west, as relief is shaded on maps, with a faint fill from the south."""
     plotter.set_background(PAPER)
     plotter.remove_all_lights()
-    for position, strength in (((-1.0, 1.2, 2.2), 0.75), ((-0.5, -1.6, 1.0), 0.42), ((1.5, -0.4, 0.8), 0.15)):
+    for position, strength in (((-1.2, 0.8, 2.0), 0.72), ((-0.3, -1.6, 1.0), 0.45), ((1.5, -0.4, 0.8), 0.15)):
         lamp = pv.Light(position=position, focal_point=(0, 0, 0), light_type="scene light", intensity=strength)
         lamp.positional = False
         plotter.add_light(lamp)
@@ -203,8 +204,9 @@ def _put(plotter: pv.Plotter, mesh: pv.DataSet, scene: Scene, *, name: str, **lo
     if mesh.n_cells == 0:
         plotter.remove_actor(name, reset_camera=False, render=False)
         return None
-    actor = plotter.add_mesh(
+    mesh = mesh.scale(
+        (1.0, 1.0, scene.exaggeration), inplace=False
+    )  # an actor's scale would leave normals as they were
+    return plotter.add_mesh(
         mesh, name=name, reset_camera=False, render=False, show_scalar_bar=False, pickable=False, **look
     )
-    actor.scale = (1.0, 1.0, scene.exaggeration)
-    return actor

@@ -37,12 +37,12 @@ class Frame:
 
 
 def round_step(length: float, *, parts: int) -> float:
-    """Return the 1-2-5 step that cuts ``length`` into about ``parts`` pieces, never more than twice as many."""
+    """Return the least 1-2-5 step that cuts ``length`` into no more than ``parts`` pieces."""
     if length <= 0 or parts < 1:
         raise ValueError(f"a length above 0 and at least 1 part are needed, got {length:g} and {parts}")
     raw = length / parts
     power = 10.0 ** math.floor(math.log10(raw))
-    return min((m * power for m in (1, 2, 5, 10)), key=lambda step: abs(math.log(step / raw)))
+    return next(m * power for m in (1, 2, 5, 10) if m * power >= raw * (1 - 1e-9))
 
 
 def frame_of(
@@ -75,7 +75,7 @@ def frame_of(
             bar = pv.Box([v for m, h in zip(middle, half, strict=True) for v in (m - h, m + h)])
             (dark if number % 2 == 0 else light).append(bar)
 
-    step = round_step(wide, parts=8)
+    step = round_step(wide, parts=9)
     staff(0, (west, east), step, (0.0, south - thick, bottom))
     staff(1, (south, north), step, (west - thick, 0.0, bottom))
     low = bottom - 0.012 * wide / exaggeration
@@ -86,7 +86,8 @@ def frame_of(
     labels.append(Label(((west + east) / 2, south - title, low), f"m east{east_of}", "centre", strong=True))
     labels.append(Label((west - title, (south + north) / 2, low), f"m north{north_of}", "right", strong=True))
 
-    deep = round_step(top - bottom, parts=4)
+    # labels nearer than this would touch
+    deep = round_step(top - bottom, parts=max(1, min(5, int((top - bottom) * exaggeration / (0.035 * wide)))))
     corner = (west - thick, north + thick)
     staff(2, (top, bottom), deep, (*corner, 0.0))
     beside = (west - off, north + off / 2.0)

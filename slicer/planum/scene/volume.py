@@ -11,6 +11,8 @@ from dataclasses import dataclass
 import numpy as np
 import pyvista as pv
 import xarray as xr
+from scipy.sparse import coo_array
+from scipy.sparse.csgraph import connected_components
 
 from planum.schema import check_slices
 
@@ -111,12 +113,19 @@ def block_from(slices: xr.Dataset, *, largest: int = LARGEST) -> Block:
     )
 
 
-def contour(block: Block, level: float) -> pv.PolyData:
+def contour(block: Block, level: float, *, least_m: float = 0.0) -> pv.PolyData:
     """Return the surface where amplitude passes ``level``, with normals pointing to the weaker side.
 
     Only voxels whose eight corners are all known carry a face: the rim of the surveyed ground is no find. Triangles
     of the flying-edges method (Schroeder, Maynard & Geveci 2015) never leave their voxel, so it suffices to drop
     those whose centre lies in a voxel with an unknown corner.
+
+    Parameters
+    ----------
+    level
+        Amplitude of the surface.
+    least_m
+        Connected pieces whose plan diagonal is shorter (m) are left out.
     """
     if block.z.size < 2:
         return pv.PolyData()
@@ -135,6 +144,8 @@ def contour(block: Block, level: float) -> pv.PolyData:
         for axis, column in ((block.z, 2), (block.y, 1), (block.x, 0))
     )
     kept = faces[whole[at]]
+    if least_m > 0 and kept.size:
+        kept = kept[_diagonal(surface.points, kept) >= least_m]
     if kept.size == 0:
         return pv.PolyData()
     used, renumbered = np.unique(kept, return_inverse=True)
@@ -155,6 +166,18 @@ def plane(block: Block, index: int) -> pv.ImageData:
     )
     image.cell_data["amplitude"] = block.layer(index).ravel()
     return image
+
+
+def _diagonal(points: np.ndarray, faces: np.ndarray) -> np.ndarray:
+    """Return for each triangle the plan diagonal (m) of the connected piece it belongs to."""
+    first, second = np.concatenate([faces[:, :2], faces[:, 1:]]).T
+    size = len(points)
+    links = coo_array((np.ones(first.size, bool), (first, second)), shape=(size, size))
+    count, piece = connected_components(links, directed=False)
+    low, high = np.full((count, 2), np.inf), np.full((count, 2), -np.inf)
+    np.minimum.at(low, piece, points[:, :2])
+    np.maximum.at(high, piece, points[:, :2])
+    return np.hypot(*(high - low).T)[piece[faces[:, 0]]]
 
 
 def _grid(x: np.ndarray, y: np.ndarray, z: np.ndarray, amplitude: np.ndarray) -> pv.ImageData | pv.RectilinearGrid:
