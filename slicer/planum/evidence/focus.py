@@ -1,14 +1,15 @@
 """Velocity from focus: migrate the site's own lines at many velocities and see where diffractions shrink to points.
 
 A diffraction migrated too slow stays a hyperbola, too fast turns into a smile; at the right velocity the energy of a
-patch sits in few samples and its kurtosis is greatest (kurtosis as a measure of simplicity: R. A. Wiggins, Minimum
-entropy deconvolution, Geoexploration 16, 1978; as a focus measure in velocity scans: common practice; both from memory).
+patch sits in few samples and its kurtosis is greatest (R. A. Wiggins, Minimum entropy deconvolution, Geoexploration 16,
+1978, for kurtosis as a measure of simplicity; as a focus measure in velocity scans common practice; from memory).
 
 One vote a patch. A patch votes where its log kurtosis has its most prominent peak, when that peak is worth a factor of
-two, so one bright pipe does not outvote the ground, and ground without diffractions does not vote. The mean log kurtosis
+two: one bright pipe does not outvote the ground, and ground without diffractions does not vote. The mean log kurtosis
 of the patches behind the winning velocity then gives the value to a fraction of a step.
 
-Targets count as points. A round top of radius r reads too fast, because its hyperbola is flatter than a point's.
+Targets count as points. A round top reads too fast, because its hyperbola is flatter than a point's: measured on models
+with targets 0.35 to 1.6 m deep at 0.1 m/ns, +1 % for a radius of 2 cm, +2 % for 5 cm, +4 % for 10 cm.
 """
 
 from __future__ import annotations
@@ -89,8 +90,8 @@ def focus_scan(
     estimate : Estimate
         m/ns; ``n`` counts the patches behind it. The 1-sigma error joins four parts as squares: drawing the lines
         anew (bootstrap; the patches when there are fewer than four lines), the velocity step as a uniform error,
-        time zero (a zero taken 1 ns late, so that all times come 1 ns early, lowers velocity by about 1.8 % for
-        targets near 1.4 m; more for shallower ones) and the odometer (1 % too long reads 1 % too fast).
+        time zero (taken 1 ns early, which makes every time 1 ns too long, it lowers the velocity by about 1.8 % for
+        targets down to 1.6 m) and the odometer (1 % too long reads 1 % too fast).
     curve : FocusCurve
         For a picture.
 
@@ -128,8 +129,8 @@ def focus_scan(
         origin="measured",
         method="focus of migrated diffractions",
         n=support,
-        evidence=f"{support} of {votes.size} voting patches on {len(lines)} lines agree within {100 * NEAR:.0f} %; error"
-        f" from lines {100 * spread:.1f} %, step {100 * parts[1]:.1f} %, time zero {100 * parts[2]:.1f} %,"
+        evidence=f"{support} of {votes.size} voting patches on {len(lines)} lines agree within {100 * NEAR:.0f} %;"
+        f" error from lines {100 * spread:.1f} %, step {100 * parts[1]:.1f} %, time zero {100 * parts[2]:.1f} %,"
         f" odometer {100 * parts[3]:.1f} %",
     )
     score = curves[np.abs(votes - at) <= NEAR].mean(axis=0)
