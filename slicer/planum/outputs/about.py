@@ -19,7 +19,7 @@ from PIL import Image
 from planum.errors import PlanumError, Problem, printable
 from planum.outputs.geopackage import STATEMENT_TABLE
 from planum.outputs.netcdf import STATEMENT_PREFIX
-from planum.outputs.writing import PNG_KEY
+from planum.outputs.writing import PNG_KEY, joined
 
 __all__ = ["READABLE", "statement_in"]
 
@@ -67,19 +67,11 @@ def _tiff(path: Path) -> dict[str, str]:
         warnings.simplefilter("ignore", rasterio.errors.NotGeoreferencedWarning)
         with rasterio.open(path, driver="GTiff") as raster:
             tags = [raster.tags(), *(raster.tags(band) for band in range(1, raster.count + 1))]
-    return _joined([_untagged(t) for t in tags])
+    return joined([_untagged(t) for t in tags])
 
 
 def _untagged(tags: dict[str, Any]) -> dict[str, str]:
     return {k.removeprefix("PLANUM_").lower(): str(v) for k, v in tags.items() if k.startswith("PLANUM_")}
-
-
-def _joined(rows: list[dict[str, str]]) -> dict[str, str]:
-    result: dict[str, list[str]] = {}
-    for row in rows:
-        for name, value in row.items():
-            result.setdefault(name, []).append(value)
-    return {k: v[0] if len(set(v)) == 1 else " | ".join(v) for k, v in result.items()}
 
 
 def _netcdf(path: Path) -> dict[str, str]:
@@ -102,7 +94,7 @@ def _geopackage(path: Path) -> dict[str, str]:
         if not base.execute("SELECT 1 FROM sqlite_master WHERE name = ?", (STATEMENT_TABLE,)).fetchone():
             return {}
         rows = base.execute(f"SELECT * FROM {STATEMENT_TABLE} ORDER BY rowid").fetchall()  # noqa: S608  # a constant
-    return _joined([{k: _number(row[k]) for k in row.keys() if k not in {"fid", "sentence"}} for row in rows])  # noqa: SIM118
+    return joined([{k: _number(row[k]) for k in row.keys() if k not in {"fid", "sentence"}} for row in rows])  # noqa: SIM118
 
 
 def _png(path: Path) -> dict[str, str]:
@@ -145,7 +137,7 @@ def _from_json(content: Any) -> dict[str, str]:
     for name in ("statements", "statement"):
         if name in content:
             inner = content[name]
-            return _joined([_record(row) for row in (inner if isinstance(inner, list) else [inner])])
+            return joined([_record(row) for row in (inner if isinstance(inner, list) else [inner])])
     return _untagged(content)
 
 

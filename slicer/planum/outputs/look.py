@@ -12,7 +12,7 @@ from PIL import Image
 
 from planum.errors import printable
 from planum.lines.recording import Recording
-from planum.outputs.paper import DPI, INK, SOFT, calm, figure, picture_of, round_step, wrapped, write_text
+from planum.outputs.paper import DPI, INK, SOFT, calm, figure, picture_of, round_step, text_height, wrapped, write_text
 from planum.outputs.section import section_greys
 from planum.outputs.writing import save_png
 
@@ -104,8 +104,7 @@ def _draw_spectrum(axes: Axes, data: np.ndarray, interval_ns: float, centre: flo
     frequency, spectrum = amplitude_spectrum(data, interval_ns)
     decibel = 20 * np.log10(np.maximum(spectrum, 1e-4))
     axes.plot(1000 * frequency, decibel, color=INK, lw=0.9)
-    loud = frequency[spectrum > 0.01]  # 40 dB: the rest of the axis is noise
-    top = 1000 * min(frequency[-1], 1.5 * max(float(loud.max(initial=0.0)), 3 * (centre or 0.0)) or frequency[-1])
+    top = 1000 * min(frequency[-1], 4 * centre if centre else frequency[-1])  # beyond lies noise
     axes.set_xlim(0, top)
     axes.set_ylim(-65, 3)
     step = round_step(top, 10)
@@ -117,7 +116,7 @@ def _draw_spectrum(axes: Axes, data: np.ndarray, interval_ns: float, centre: flo
     axes.set_ylabel("mean amplitude, dB", fontsize=7, color=SOFT, labelpad=2)
     if centre:
         axes.axvline(1000 * centre, color=SOFT, lw=0.8, ls=(0, (4, 3)))
-        axes.text(1000 * centre + 0.006 * top, -2, f"nominal {1000 * centre:g} MHz", fontsize=7, color=SOFT, va="top")
+        axes.text(1000 * centre + 0.006 * top, -62, f"nominal {1000 * centre:g} MHz", fontsize=7, color=SOFT)
 
 
 def _write_facts(picture: Image.Image, recording: Recording) -> None:
@@ -126,7 +125,7 @@ def _write_facts(picture: Image.Image, recording: Recording) -> None:
     room = picture.width - left - 20
     for name, value in _facts(recording):
         lines = wrapped(printable(value, longest=160), width_px=room, points=7.5)
-        needed = 15 + 14 * (lines.count("\n") + 1) + 8
+        needed = 13 + text_height(lines, 7.5) + 12
         if y + needed > picture.height - 20:
             write_text(picture, (left, y), "…", 7.5)
             break

@@ -85,6 +85,16 @@ def write_text(picture: Image.Image, at: tuple[float, float], text: str, points:
     ImageDraw.Draw(picture).text(at, text, font=face, **{"spacing": points * 0.75, "fill": 28, **more})
 
 
+def write_upright(picture: Image.Image, at: tuple[float, float], text: str, points: float, *, fill: int = 90) -> None:
+    """Write text that reads upwards, its middle at ``at`` (pixels)."""
+    face = font(points)
+    right, bottom = (math.ceil(v) for v in face.getbbox(text)[2:])
+    ink = Image.new("L", (right + 2, bottom + 2), 0)
+    ImageDraw.Draw(ink).text((0, 0), text, font=face, fill=255)
+    ink = ink.rotate(90, expand=True)
+    picture.paste(fill, (round(at[0] - ink.width / 2), round(at[1] - ink.height / 2)), ink)
+
+
 def text_height(text: str, points: float) -> float:
     """Height in pixels of text written by :func:`write_text`."""
     lines = text.count("\n") + 1

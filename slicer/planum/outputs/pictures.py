@@ -28,7 +28,7 @@ from planum.outputs.paper import (
 )
 from planum.outputs.raster import Raster, check_statements, plane, raster_of, slice_label, slice_name
 from planum.outputs.stretch import GREY_NODATA, Stretch, grey
-from planum.outputs.writing import save_png, statement_text
+from planum.outputs.writing import joined, save_png, statement_text
 from planum.records import Statement
 
 __all__ = ["SlicePainter", "draw_contact_sheet", "draw_slices"]
@@ -236,10 +236,8 @@ def draw_contact_sheet(
         write_text(sheet, (left, top + 6), slice_label(statement.top_m, statement.bottom_m), 8)
         sheet.paste(_thumbnail(grey(plane(slices, index), stretch), (wide, tall)), (left, top + label))
     write_text(sheet, (edge, size[1] - foot + 12), cautions, _CAUTIONS, fill=90)
-    common = {k: v for k, v in first.tags().items() if all(s.tags()[k] == v for s in statements)}
-    save_png(
-        path, sheet, title=f"{name}, {n} depth slices", sentence=first.sentence(), statement=statement_text(common)
-    )
+    said = statement_text(joined([s.tags() for s in statements]))
+    save_png(path, sheet, title=f"{name}, {n} depth slices", sentence=facts.replace("\n", " "), statement=said)
 
 
 def _thumbnail(greys: np.ndarray, size: tuple[int, int]) -> Image.Image:

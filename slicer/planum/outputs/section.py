@@ -8,30 +8,19 @@ from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
-from matplotlib.axes import Axes
-from matplotlib.patches import Rectangle
-from PIL import Image
+from PIL import Image, ImageDraw
 
-from planum.outputs.paper import (
-    DPI,
-    FAINT,
-    INK,
-    SOFT,
-    calm,
-    figure,
-    picture_of,
-    round_step,
-    text_height,
-    wrapped,
-    write_text,
-)
+from planum.outputs.paper import DPI, round_step, text_height, wrapped, write_text, write_upright
 from planum.outputs.writing import save_png
 from planum.records import Velocity
 
 __all__ = ["DepthScale", "draw_section", "section_greys"]
 
-_LEFT, _RIGHT, _TOP, _GAP, _FOOT = 0.56, 0.78, 0.62, 0.34, 0.5  # in
-_WIDTH, _PANEL = 9.0, 1.9  # in
+# Drawn straight into the picture: a survey has a section per line, and axes objects would take most of the time.
+_LEFT, _RIGHT, _TOP, _GAP, _AXIS = 64, 88, 76, 40, 46  # pixels: margins, between panels, below the last one
+_WIDE, _TALL = 928, 228  # pixels of one panel
+_INK, _SOFT = 28, 90  # greys
+_TICKS, _FOOT = 7.5, 6.8  # points
 
 
 @dataclass(frozen=True)
@@ -76,32 +65,24 @@ def draw_section(
     """
     if not panels:
         raise ValueError("a section needs at least one panel")
-    west, east = _edges(along, "along")
-    first, last = _edges(times, "times")
-    foot = wrapped(statement, width_px=(_WIDTH - _LEFT - _RIGHT) * DPI, points=6.6) if statement else ""
-    height = _TOP + len(panels) * (_PANEL + _GAP) - _GAP + _FOOT
-    foot_px = text_height(foot, 6.6) + 26 if foot else 0
-    fig, canvas = figure(_WIDTH, height + foot_px / DPI)
-    total = float(fig.get_size_inches()[1])
-    wide = _WIDTH - _LEFT - _RIGHT
-    boxes = []
-    for index in range(len(panels)):
-        top = _TOP + index * (_PANEL + _GAP)
-        boxes.append((round(_LEFT * DPI), round(top * DPI), round(wide * DPI), round(_PANEL * DPI)))
-        axes = fig.add_axes((_LEFT / _WIDTH, 1 - (top + _PANEL) / total, wide / _WIDTH, _PANEL / total))
-        axes.set_xlim(west, east)
-        axes.set_ylim(last, first)
-        _draw_axes(axes, scale, (first, last), lowest=index == len(panels) - 1)
-    canvas.draw()
-    picture = picture_of(canvas)
-    for (name, values), (left, top, wide_px, tall_px) in zip(panels.items(), boxes, strict=True):
+    span, window = _edges(along, "along"), _edges(times, "times")
+    foot = wrapped(statement, width_px=_WIDE, points=_FOOT) if statement else ""
+    below = _TOP + len(panels) * (_TALL + _GAP) - _GAP + _AXIS
+    height = below + (round(text_height(foot, _FOOT)) + 24 if foot else 8)
+    picture = Image.new("L", (_LEFT + _WIDE + _RIGHT, height), 255)
+    for index, (name, values) in enumerate(panels.items()):
+        top = _TOP + index * (_TALL + _GAP)
         greys = Image.fromarray(np.ascontiguousarray(section_greys(values).T))
-        method = Image.Resampling.BOX if greys.width > wide_px else Image.Resampling.BILINEAR
-        picture.paste(greys.resize((wide_px - 2, tall_px - 2), method), (left + 1, top + 1))
-        write_text(picture, (left, top - 17), name, 7.5, bold=True)
-    write_text(picture, (_LEFT * DPI, 14), title, 11, bold=True)
+        method = Image.Resampling.BOX if greys.width > _WIDE else Image.Resampling.BILINEAR
+        picture.paste(greys.resize((_WIDE, _TALL), method), (_LEFT, top))
+        ImageDraw.Draw(picture).rectangle((_LEFT - 1, top - 1, _LEFT + _WIDE, top + _TALL), outline=_INK)
+        write_text(picture, (_LEFT, top - 19), name, 8, bold=True)
+        _draw_distance(picture, top + _TALL, span, labels=index == len(panels) - 1)
+        _draw_times(picture, top, window)
+        _draw_depths(picture, top, window, scale)
+    write_text(picture, (_LEFT, 16), title, 12, bold=True)
     if foot:
-        write_text(picture, (_LEFT * DPI, height * DPI + 6), foot, 6.6, fill=90)
+        write_text(picture, (_LEFT, below + 6), foot, _FOOT, fill=_SOFT)
     save_png(path, picture, title=title, sentence=statement, dpi=DPI)
 
 
@@ -130,54 +111,59 @@ def _edges(axis: np.ndarray, name: str) -> tuple[float, float]:
     return low, high
 
 
-def _draw_axes(axes: Axes, scale: DepthScale, window: tuple[float, float], *, lowest: bool) -> None:
-    """Distance below, time at the left, depth and slices at the right."""
-    calm(axes)
-    first, last = window
-    west, east = axes.get_xlim()
-    step = round_step(east - west, 10)
-    at = step * np.arange(math.ceil(west / step - 1e-9), math.floor(east / step + 1e-9) + 1)
-    axes.set_xticks(at, [f"{v:g}" for v in at] if lowest else [""] * at.size)
-    step = round_step(last - first, 5)
-    axes.set_yticks(step * np.arange(math.ceil(first / step - 1e-9), math.floor(last / step + 1e-9) + 1))
-    axes.set_ylabel("two-way time, ns", fontsize=7, color=SOFT, labelpad=2)
-    if lowest:
-        axes.set_xlabel("distance along the line, m", fontsize=7, color=SOFT, labelpad=2)
-    _draw_depths(axes, scale, window)
+def _ticks(low: float, high: float, at_most: float) -> np.ndarray:
+    step = round_step(high - low, at_most)
+    return step * np.arange(math.ceil(low / step - 1e-9), math.floor(high / step + 1e-9) + 1)
 
 
-def _draw_depths(axes: Axes, scale: DepthScale, window: tuple[float, float]) -> None:
+def _draw_distance(picture: Image.Image, y: int, span: tuple[float, float], *, labels: bool) -> None:
+    draw = ImageDraw.Draw(picture)
+    for at in _ticks(*span, 10):
+        x = round(_LEFT + (at - span[0]) / (span[1] - span[0]) * (_WIDE - 1))
+        draw.line((x, y, x, y + 5), fill=_INK)
+        if labels:
+            write_text(picture, (x, y + 8), f"{at:g}", _TICKS, anchor="ma", fill=_SOFT)
+    if labels:
+        write_text(picture, (_LEFT + _WIDE / 2, y + 24), "distance along the line, m", _TICKS, anchor="ma", fill=_SOFT)
+
+
+def _draw_times(picture: Image.Image, top: int, window: tuple[float, float]) -> None:
+    draw = ImageDraw.Draw(picture)
+    for at in _ticks(*window, 5):
+        y = _row(at, top, window)
+        draw.line((_LEFT - 6, y, _LEFT - 1, y), fill=_INK)
+        write_text(picture, (_LEFT - 9, y), f"{at:g}", _TICKS, anchor="rm", fill=_SOFT)
+    write_upright(picture, (18, top + _TALL / 2), "two-way time, ns", _TICKS, fill=_SOFT)
+
+
+def _draw_depths(picture: Image.Image, top: int, window: tuple[float, float], scale: DepthScale) -> None:
     """Depth ticks where the velocity puts them, slices as a ruler of alternating blocks."""
-    first, last = window
-    deepest = float(scale.velocity.depth(last, separation_m=scale.separation_m))
-    across = axes.get_yaxis_transform()
-    ruler = 1.004
-    blocks = [
-        (scale.velocity.time(interval, separation_m=scale.separation_m), index)
-        for index, interval in enumerate(_side_by_side(scale.intervals))
-    ]
-    for (top, bottom), index in blocks:
-        if top >= last:
+    draw = ImageDraw.Draw(picture)
+    separation = scale.separation_m
+    left = _LEFT + _WIDE + 5
+    right = left
+    for index, interval in enumerate(_side_by_side(scale.intervals)):
+        first, last = (float(t) for t in scale.velocity.time(interval, separation_m=separation))
+        if first < window[1] and last > window[0]:
+            right = left + 6
+            rows = _row(max(first, window[0]), top, window), _row(min(last, window[1]), top, window)
+            draw.rectangle((left, rows[0], right, rows[1]), outline=_INK, fill=_INK if index % 2 == 0 else 255)
+    deepest = float(scale.velocity.depth(window[1], separation_m=separation))
+    previous = -math.inf
+    for depth in _ticks(0.0, max(deepest, 1e-3), 6):
+        at = float(scale.velocity.time(depth, separation_m=separation))
+        if not window[0] <= at <= window[1]:
             continue
-        axes.add_patch(
-            Rectangle(
-                (ruler, top), 0.007, min(bottom, last) - top, transform=across, clip_on=False, lw=0.5, ec=INK,
-                fc=INK if index % 2 == 0 else "white",
-            )
-        )  # fmt: skip
-    start = ruler + (0.007 if blocks else 0.0)
-    step = round_step(max(deepest, 1e-3), 6)
-    for depth in step * np.arange(math.floor(deepest / step + 1e-9) + 1):
-        at = float(scale.velocity.time(depth, separation_m=scale.separation_m))
-        if first <= at <= last:
-            axes.plot([start, start + 0.005], [at, at], transform=across, clip_on=False, color=INK, lw=0.7)
-            axes.text(start + 0.009, at, f"{depth:g}", transform=across, fontsize=7.5, color=SOFT, va="center_baseline")
-    axes.text(
-        1.075, 0.5, "depth, m", transform=axes.transAxes, rotation=90, fontsize=7, color=SOFT, va="center", ha="center"
-    )
-    zero = float(scale.velocity.time(0.0, separation_m=scale.separation_m))
-    if first < zero < last:
-        axes.axhline(zero, color=FAINT, lw=0.6)
+        y = _row(at, top, window)
+        draw.line((right + 1, y, right + 6, y), fill=_INK)
+        if y - previous >= 13:
+            write_text(picture, (right + 10, y), f"{depth:g}", _TICKS, anchor="lm", fill=_SOFT)
+            previous = y
+    write_upright(picture, (picture.width - 18, top + _TALL / 2), "depth, m", _TICKS, fill=_SOFT)
+
+
+def _row(time: float, top: int, window: tuple[float, float]) -> int:
+    return round(top + (time - window[0]) / (window[1] - window[0]) * (_TALL - 1))
 
 
 def _side_by_side(intervals: Sequence[tuple[float, float]]) -> list[tuple[float, float]]:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import json
 import os
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from pathlib import Path
 
@@ -14,7 +14,7 @@ from PIL.PngImagePlugin import PngInfo
 from planum.errors import MachineError, Problem
 from planum.records import Statement
 
-__all__ = ["PNG_KEY", "aside", "save_png", "statement_text"]
+__all__ = ["PNG_KEY", "aside", "joined", "save_png", "statement_text"]
 
 PNG_KEY = "planum-statement"
 """Keyword of the PNG text chunk, and name of the HTML meta element, that hold the statement as JSON."""
@@ -53,6 +53,15 @@ def statement_text(statement: Statement | Mapping[str, str]) -> str:
     """Return the statement's tags as one line of ASCII JSON."""
     tags = statement.tags() if isinstance(statement, Statement) else dict(statement)
     return json.dumps(tags, sort_keys=True, ensure_ascii=True)
+
+
+def joined(rows: Sequence[Mapping[str, str]]) -> dict[str, str]:
+    """Return what several statements say: one text where all agree, all texts joined by ``" | "`` where they differ."""
+    result: dict[str, list[str]] = {}
+    for row in rows:
+        for name, value in row.items():
+            result.setdefault(name, []).append(value)
+    return {k: v[0] if len(set(v)) == 1 else " | ".join(v) for k, v in result.items()}
 
 
 def save_png(
