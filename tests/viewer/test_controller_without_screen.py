@@ -1,0 +1,104 @@
+"""The controller: every change of state, and the parts of the picture it touches."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+import xarray as xr
+
+from planum.records import Statement
+from planum.scene.build import build_scene
+from planum.viewer.control import Controller
+
+
+def statement(top: float, bottom: float) -> Statement:
+    return Statement(
+        quantity="reflection envelope",
+        top_m=top,
+        bottom_m=bottom,
+        statistic="mean",
+        velocity_m_per_ns=0.085,
+        velocity_error_m_per_ns=0.002,
+        velocity_origin="measured",
+        depth_error_m=0.04,
+        zero_rule="direct wave",
+        zero_error_ns=0.2,
+        surface="the ground surface",
+        date="2026-04-18",
+        migration="migrated in 2-D, line by line",
+        fill="filled",
+        line_spacing_m=0.25,
+        coverage_rule="masked",
+        resolution="0.1 m",
+        stretch="one stretch",
+    )
+
+
+@pytest.fixture
+def control(ring: xr.Dataset) -> Controller:
+    lines = [("1", np.array([[512_340.0, 5_398_121.0], [512_356.0, 5_398_121.0]]))]
+    return Controller(build_scene(ring, lines=lines, slice_depth=0.5), (statement(0.35, 0.45), statement(0.55, 0.65)))
+
+
+def test_a_step_down_is_the_next_deeper_slice(control: Controller) -> None:
+    assert control.step(1) == {"slice", "text"}
+    assert control.scene.depth_m == pytest.approx(0.6)
+    control.step(-2)
+    assert control.scene.depth_m == pytest.approx(0.4)
+    assert control.scene.plane.bounds[4] == pytest.approx(-0.4, abs=1e-6)
+
+
+def test_steps_stop_at_the_ends_and_then_change_nothing(control: Controller) -> None:
+    control.step(-100)
+    assert control.scene.index == 0
+    assert control.step(-1) == frozenset()
+    control.step(100)
+    assert control.scene.depth_m == pytest.approx(control.depths[1])
+    assert control.step(1) == frozenset()
+
+
+def test_the_depth_slider_goes_to_the_nearest_slice(control: Controller) -> None:
+    assert control.to_depth(0.97) == {"slice", "text"}
+    assert control.scene.depth_m == pytest.approx(1.0)
+    assert control.to_depth(1.01) == frozenset()
+
+
+def test_a_higher_level_encloses_less(control: Controller) -> None:
+    control.to_level(0.5)
+    wide = control.scene.isosurface.volume
+    assert control.to_level(0.9) == {"isosurface", "text"}
+    assert control.scene.isosurface.volume < wide
+    assert control.to_level(0.9) == frozenset()
+
+
+def test_switches_leave_the_scene_itself_alone(control: Controller) -> None:
+    assert control.toggle_isosurface() == {"isosurface", "text"}
+    assert control.toggle_lines() == {"lines"}
+    shown = control.shown()
+    assert (shown.isosurface.n_cells, shown.lines.n_cells) == (0, 0)
+    assert control.level_text() == "isosurface off"
+    control.toggle_isosurface()
+    control.toggle_lines()
+    assert control.shown().isosurface.n_cells == control.scene.isosurface.n_cells > 0
+    assert control.shown().lines.n_cells == 1
+
+
+def test_the_status_is_the_statement_of_the_slice_in_view(control: Controller) -> None:
+    control.to_depth(0.6)
+    assert control.status() == statement(0.55, 0.65).sentence()
+    control.to_depth(0.9)  # no statement reaches here
+    assert control.status() == "slice 0.85 to 0.95 m, ± 0.06 m below the surface."
+
+
+def test_a_message_lasts_until_the_next_change(control: Controller) -> None:
+    assert control.say("written") == {"text"}
+    assert control.toggle_lines() == {"lines", "text"}
+    assert control.message == ""
+
+
+def test_the_slider_of_levels_runs_from_the_median_to_the_strongest(control: Controller, ring: xr.Dataset) -> None:
+    assert control.levels == pytest.approx((float(ring.amplitude.median()), float(ring.amplitude.max())))
+
+
+def test_a_picture_is_named_after_code_and_depth(control: Controller) -> None:
+    assert control.picture_name() == "MBF1_d045-055cm"
