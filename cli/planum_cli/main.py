@@ -13,10 +13,10 @@ from collections.abc import Sequence
 from typing import Any, NoReturn
 
 import click
+
 from planum import __version__
 from planum.constants import CAUTIONS
 from planum.errors import nearest
-
 from planum_cli import codes
 from planum_cli.options import manner
 from planum_cli.talk import Talk
@@ -24,10 +24,10 @@ from planum_cli.talk import Talk
 __all__ = ["COMMANDS", "HEADINGS", "cli", "main"]
 
 HEADINGS = {
-    "start": "Start: something to try",
-    "evening": "Evening: back from the field",
-    "night": "Night: the slices",
-    "house": "House: what is what, and tidying up",
+    "start": "Start, with something to try",
+    "evening": "Evening, back from the field",
+    "night": "Night, making the slices",
+    "house": "House, what is what and where it goes",
 }
 
 COMMANDS: dict[str, tuple[str, str, str]] = {
@@ -47,11 +47,11 @@ COMMANDS: dict[str, tuple[str, str, str]] = {
 class House(click.Group):
     """A group that loads a command only when it is called for, and lists them under headings."""
 
-    def list_commands(self, ctx: click.Context) -> list[str]:
+    def list_commands(self, ctx: click.Context) -> list[str]:  # noqa: ARG002
         """Return the names in the order of the help."""
         return list(COMMANDS)
 
-    def get_command(self, ctx: click.Context, cmd_name: str) -> click.Command | None:
+    def get_command(self, ctx: click.Context, cmd_name: str) -> click.Command | None:  # noqa: ARG002
         """Load one command's module."""
         if cmd_name not in COMMANDS:
             return None
@@ -70,7 +70,7 @@ class House(click.Group):
             raise click.UsageError(f"there is no command {word!r}; {nearest(word, COMMANDS)}", ctx=ctx)
         return super().resolve_command(ctx, args)
 
-    def format_commands(self, ctx: click.Context, formatter: click.HelpFormatter) -> None:
+    def format_commands(self, ctx: click.Context, formatter: click.HelpFormatter) -> None:  # noqa: ARG002
         """List the commands under their headings, from the table alone: nothing is loaded."""
         wide = max(map(len, COMMANDS)) + 2
         for heading, title in HEADINGS.items():
@@ -78,18 +78,21 @@ class House(click.Group):
             with formatter.section(title):
                 formatter.write_dl(rows)
 
-    def format_epilog(self, ctx: click.Context, formatter: click.HelpFormatter) -> None:
+    def format_epilog(self, ctx: click.Context, formatter: click.HelpFormatter) -> None:  # noqa: ARG002
         """Give a first example, the exit codes and the cautions."""
         with formatter.section("First steps"):
             formatter.write_dl(
                 [
                     ("planum demo", "an example, from lines to slices"),
-                    ("planum new MYSITE --lines FOLDER", "your own lines"),
+                    ("planum new MYSITE --lines FOLDER", "a survey folder for your own lines"),
+                    ("planum check MYSITE", "what is wrong with it, before the night"),
+                    ("planum map MYSITE", "its slices"),
                     ("planum map --help", "more on one command"),
-                ]
+                ],
+                col_max=36,
             )
         with formatter.section("Exit codes"):
-            formatter.write_text(", ".join(f"{code} {meaning}" for code, meaning in codes.MEANING.items()))
+            formatter.write_dl([(str(code), meaning) for code, meaning in codes.MEANING.items()])
         with formatter.section("Cautions"):
             for caution in CAUTIONS:
                 formatter.write_text(caution)

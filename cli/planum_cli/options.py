@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Callable
 from pathlib import Path
 from typing import Any, TypeVar
@@ -10,7 +11,7 @@ import click
 
 from planum_cli.talk import Talk
 
-__all__ = ["PlainCommand", "manner", "name", "root", "site"]
+__all__ = ["PlainCommand", "manner", "name", "plain_name", "root", "site"]
 
 F = TypeVar("F", bound=Callable[..., Any])
 
@@ -62,3 +63,12 @@ root = click.option(
     type=click.Path(exists=True, file_okay=False, path_type=Path),
     help="A further folder the survey may take line files from (may be repeated).",
 )
+
+
+def plain_name(text: str) -> str:
+    """Return a run's name, refused when it could not be part of a folder's name."""
+    if not re.fullmatch(r"[A-Za-z0-9][A-Za-z0-9_.-]{0,31}", text):
+        raise click.BadParameter(
+            f"{text!r}: allowed are up to 32 letters, digits, _ - and ., a letter or digit first", param_hint="--name"
+        )
+    return text

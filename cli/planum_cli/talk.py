@@ -17,10 +17,11 @@ import sys
 import time
 import warnings
 from collections.abc import Iterable, Iterator
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from typing import Any
 
 import click
+
 from planum.errors import PlanumWarning, Problem, printable
 
 __all__ = ["Talk", "aligned"]
@@ -185,7 +186,5 @@ def _speaks_unicode() -> bool:
 
 
 def _to_stderr(text: str, *, newline: bool = True) -> None:
-    try:
+    with suppress(BrokenPipeError):  # nobody reads the progress any more: that is no reason to stop the work
         click.echo(text, err=True, nl=newline)
-    except BrokenPipeError:
-        pass  # nobody reads the progress any more: that is no reason to stop the work

@@ -1,0 +1,91 @@
+"""`planum look`: one recorded line."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import click
+
+from planum_cli import options
+from planum_cli.running import quoted
+from planum_cli.talk import Talk, aligned
+
+if TYPE_CHECKING:
+    from planum.lines.recording import Recording
+
+
+@click.command(
+    "look",
+    cls=options.PlainCommand,
+    examples=(
+        "planum look lines/A_01.sgy              what the file says, and A_01.png beside where you are",
+        "planum look lines/A_01.sgy --unit ps --frequency 400",
+    ),
+)
+@click.argument("file", type=click.Path(exists=True, dir_okay=False, path_type=Path))
+@click.option(
+    "--picture",
+    metavar="PNG",
+    type=click.Path(dir_okay=False, path_type=Path),
+    help="The picture to write; the file's name with .png, where you are, if not given.",
+)
+@click.option(
+    "--interval-ns",
+    metavar="NS",
+    type=click.FloatRange(0, 100, min_open=True),
+    help="Time between samples, ns; beats the file.",
+)
+@click.option("--unit", type=click.Choice(["ps", "ns", "us"]), help="What the file's interval field holds.")
+@click.option(
+    "--frequency", metavar="MHZ", type=click.FloatRange(10, 3000), help="Nominal centre frequency, to compare with."
+)
+@options.manner
+@click.pass_obj
+def command(talk: Talk, file: Path, picture: Path | None, interval_ns: float | None, **rest: Any) -> int:
+    """Draw the recorded line FILE as it is, and print what it says of itself."""
+    from planum.lines.reading import read_line
+    from planum.lines.recording import ReadOptions
+    from planum.outputs.look import draw_look
+
+    if interval_ns is not None and rest["unit"] is not None:
+        raise click.UsageError("--interval-ns and --unit both say how long a sample is; give one of them")
+    target = Path(f"{file.stem}.png") if picture is None else picture
+    _refuse_overwriting(target, file)
+    frequency = None if rest["frequency"] is None else rest["frequency"] / 1e3
+    recording = read_line(
+        file, ReadOptions(interval_ns=interval_ns, interval_unit=rest["unit"], centre_frequency_ghz=frequency)
+    )
+    for problem in recording.problems:
+        talk.tell(problem)
+    draw_look(target, recording, title=file.name, centre_frequency_ghz=frequency)
+    talk.result(aligned([*_facts(recording), ("picture", target)]))
+    talk.next("planum new MYSITE --lines FOLDER   drafts a survey from a folder of such files")
+    return 0
+
+
+def _refuse_overwriting(target: Path, file: Path) -> None:
+    if target.suffix.lower() != ".png":
+        raise click.BadParameter(f"{quoted(target)}: a picture's name ends in .png", param_hint="--picture")
+    if target.exists() and target.samefile(file):
+        raise click.BadParameter("the picture would overwrite the line file", param_hint="--picture")
+
+
+def _facts(recording: Recording) -> list[tuple[str, object]]:
+    n_traces, n_samples = recording.data.shape
+    facts: list[tuple[str, object]] = [
+        ("traces", n_traces),
+        ("samples", n_samples),
+        ("sample interval", f"{recording.interval_ns:.6g} ns ({recording.interval_origin})"),
+        ("window", f"{recording.interval_ns * n_samples:.4g} ns"),
+        ("values", f"{recording.data.dtype.name}, {recording.data.min():g} to {recording.data.max():g}"),
+    ]
+    for key, value in recording.header.items():
+        if key == "text":
+            rows = [str(row).rstrip() for row in value]
+            facts += [
+                ("text" if not i else "", row) for i, row in enumerate(r for r in rows if r.strip(" C0123456789"))
+            ]
+        elif value not in ("", None):
+            facts.append((key.replace("_", " "), value))
+    return facts

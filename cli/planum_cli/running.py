@@ -1,0 +1,63 @@
+"""How the end of a run is told: by `map` and `demo`."""
+
+from __future__ import annotations
+
+import shlex
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+from planum_cli import codes
+from planum_cli.talk import Talk, aligned
+
+if TYPE_CHECKING:
+    from planum.pipeline.run import RunResult
+
+__all__ = ["count", "quoted", "tell_run"]
+
+
+def count(number: int, word: str) -> str:
+    """Return a number with its word, singular or plural."""
+    return f"{number} {word}" if number == 1 else f"{number} {word}s"
+
+
+def quoted(path: Path) -> str:
+    """Return a path as it is typed in a shell."""
+    return shlex.quote(str(path))
+
+
+def tell_run(talk: Talk, result: RunResult, *, site: Path, name: str | None = None, at_home: bool = True) -> int:
+    """Tell what was made, what was set aside and what to do next; return the exit code.
+
+    ``at_home``: the run lies in the survey folder, where `planum view SITE` looks for it.
+    """
+    for problem in (*result.warnings, *result.set_aside):
+        talk.tell(problem)
+    aside = len(result.set_aside)
+    if aside:
+        talk.say(f"{count(aside, 'line')} set aside; the report names each and why")
+    if not result.changed:
+        talk.say("nothing has changed since this run was made: it stays as it is")
+    talk.result(aligned([("results", result.out), *_pairs(result.summary)]))
+    out = result.out
+    view = f"planum view {quoted(site if at_home else out)}" + (f" --name {name}" if name else "")
+    talk.next(
+        f"open {quoted(out / 'report.html')} in a browser: what was done, and what to be careful with",
+        f"load {quoted(out / 'slices')} in a GIS, or {quoted(out / 'slices.nc')} in a notebook",
+        f"{view}   to look at them in three dimensions",
+    )
+    return codes.SET_ASIDE if aside else codes.DONE
+
+
+def _pairs(summary: dict[str, Any]) -> list[tuple[str, str]]:
+    """Return the summary as label and text, without what is empty."""
+    return [
+        (key.replace("_", " "), _text(value)) for key, value in summary.items() if value not in (None, "", [], (), {})
+    ]
+
+
+def _text(value: object) -> str:
+    if isinstance(value, list | tuple):
+        return "; ".join(_text(v) for v in value)
+    if isinstance(value, dict):
+        return "; ".join(f"{k} {_text(v)}" for k, v in value.items())
+    return f"{value:.4g}" if isinstance(value, float) else str(value)
