@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+
 import numpy as np
 import pytest
 import xarray as xr
@@ -11,31 +13,8 @@ from planum.scene.build import build_scene
 from planum.viewer.control import Controller
 
 
-def statement(top: float, bottom: float) -> Statement:
-    return Statement(
-        quantity="reflection envelope",
-        top_m=top,
-        bottom_m=bottom,
-        statistic="mean",
-        velocity_m_per_ns=0.085,
-        velocity_error_m_per_ns=0.002,
-        velocity_origin="measured",
-        depth_error_m=0.04,
-        zero_rule="direct wave",
-        zero_error_ns=0.2,
-        surface="the ground surface",
-        date="2026-04-18",
-        migration="migrated in 2-D, line by line",
-        fill="filled",
-        line_spacing_m=0.25,
-        coverage_rule="masked",
-        resolution="0.1 m",
-        stretch="one stretch",
-    )
-
-
 @pytest.fixture
-def control(ring: xr.Dataset) -> Controller:
+def control(ring: xr.Dataset, statement: Callable[[float, float], Statement]) -> Controller:
     lines = [("1", np.array([[512_340.0, 5_398_121.0], [512_356.0, 5_398_121.0]]))]
     return Controller(build_scene(ring, lines=lines, slice_depth=0.5), (statement(0.35, 0.45), statement(0.55, 0.65)))
 
@@ -83,7 +62,9 @@ def test_switches_leave_the_scene_itself_alone(control: Controller) -> None:
     assert control.shown().lines.n_cells == 1
 
 
-def test_the_status_is_the_statement_of_the_slice_in_view(control: Controller) -> None:
+def test_the_status_is_the_statement_of_the_slice_in_view(
+    control: Controller, statement: Callable[[float, float], Statement]
+) -> None:
     control.to_depth(0.6)
     assert control.status() == statement(0.55, 0.65).sentence()
     control.to_depth(0.9)  # no statement reaches here

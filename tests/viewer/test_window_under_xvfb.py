@@ -28,7 +28,7 @@ check_screen()
 slices = xr.open_dataset(folder / "slices.nc", engine="h5netcdf")
 lines = [(str(i), np.array([[512340.0, 5398121.0 + i], [512356.0, 5398121.0 + i]])) for i in range(8)]
 control = Controller(build_scene(slices, lines=lines, slice_depth=0.3))
-window = Window(control, pictures=folder, size=(900, 600))
+window = Window(control, pictures=folder, size=(900, 600), picture_size=(160, 110))
 window.connect()
 plotter = window.plotter
 plotter.show(auto_close=False, interactive=False, interactive_update=True)

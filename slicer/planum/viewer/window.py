@@ -13,6 +13,7 @@ import xarray as xr
 
 from planum.errors import MachineError, Problem
 from planum.records import Statement
+from planum.scene import picture
 from planum.scene.build import Lines, build_scene
 from planum.scene.drawing import (
     INK,
@@ -28,7 +29,6 @@ from planum.scene.drawing import (
     write,
 )
 from planum.scene.environment import has_screen
-from planum.scene.picture import render
 from planum.scene.probe import rendering_problem
 from planum.viewer.control import HELP, Controller, Part
 
@@ -49,15 +49,24 @@ class Window:
     pictures
         Folder the key S writes into.
     size
-        Width and height in pixels.
+        Width and height of the window in pixels.
+    picture_size
+        The same of the pictures the key S writes.
     off_screen
         Draw without opening a window, for tests and pictures.
     """
 
     def __init__(
-        self, controller: Controller, *, pictures: Path, size: tuple[int, int] = SIZE, off_screen: bool = False
+        self,
+        controller: Controller,
+        *,
+        pictures: Path,
+        size: tuple[int, int] = SIZE,
+        picture_size: tuple[int, int] = picture.SIZE,
+        off_screen: bool = False,
     ) -> None:
         self.controller = controller
+        self.picture_size = picture_size
         self.pictures = pictures
         title = f"planum: {controller.scene.title}" if controller.scene.title else "planum"
         self.plotter = pv.Plotter(window_size=list(size), title=title, lighting="none", off_screen=off_screen)
@@ -124,7 +133,7 @@ class Window:
         while (path := self.pictures / f"{name}_{number}.png").exists():
             number += 1
         try:
-            render(self.controller.shown(), path)
+            picture.render(self.controller.shown(), path, size=self.picture_size)
         except OSError as error:
             return self.controller.say(f"no picture: {error}")
         return self.controller.say(f"picture written to {path}")
