@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 import xarray as xr
 
@@ -15,8 +17,8 @@ _BLOCK = 256
 
 
 def odd_window(window_ns: float, step_ns: float) -> int:
-    """Return the odd number of samples, 3 at least, nearest to ``window_ns``."""
-    return max(2 * round((window_ns / step_ns - 1.0) / 2.0) + 1, 3)
+    """Return the odd number of samples, 3 at least, nearest to ``window_ns`` (the larger of two)."""
+    return max(2 * math.floor(window_ns / step_ns / 2.0 + 1e-9) + 1, 3)
 
 
 def dewow_kernel(data: np.ndarray, *, window: int) -> np.ndarray:
