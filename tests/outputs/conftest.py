@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import zlib
+
 import numpy as np
 import pytest
 import xarray as xr
@@ -83,3 +85,68 @@ def slices() -> xr.Dataset:
 @pytest.fixture(scope="session")
 def statements(slices):
     return make_statements(slices)
+
+
+@pytest.fixture(scope="session", name="make_slices")
+def _make_slices():
+    return make_slices
+
+
+@pytest.fixture(scope="session", name="make_statements")
+def _make_statements():
+    return make_statements
+
+
+@pytest.fixture
+def planes_per_compute(make_slices):
+    """A dask-backed stack, and the planes that each compute touched."""
+    import dask
+    import dask.array as da
+
+    source = make_slices(n=4, shape=(60, 80))
+    touched: list[set[int]] = []
+
+    def make(block, index):
+        touched[-1].add(int(index.ravel()[0]))
+        return block
+
+    numbers = da.from_array(np.arange(4).reshape(4, 1, 1), chunks=(1, 1, 1))
+
+    def lazy(name):
+        values = da.from_array(source[name].values, chunks=(1, -1, -1))
+        return ("depth", "y", "x"), da.map_blocks(make, values, numbers, dtype="f4", meta=np.empty((0, 0, 0), "f4"))
+
+    stack = source.assign(amplitude=lazy("amplitude"), left_out_error=lazy("left_out_error"))
+
+    def watched(graph, keys, **options):
+        touched.append(set())
+        return dask.get(graph, keys, **options)
+
+    with dask.config.set(scheduler=watched):
+        yield stack, touched
+
+
+def decoded(page) -> np.ndarray:
+    """Cells of a tiled deflate float32 TIFF page, decoded here from its bytes and tags.
+
+    Source: TIFF 6.0, section 15 (tiles); Adobe Photoshop TIFF Technical Note 3 (predictor 3), both from memory.
+    """
+    assert (page.compression, page.predictor) == (8, 3)
+    high, wide, bands = page.imagelength, page.imagewidth, page.samplesperpixel
+    tall, across = page.tilelength, page.tilewidth
+    down, right = -(-high // tall), -(-wide // across)
+    out = np.empty((bands, down * tall, right * across), np.float32)
+    for index, (offset, count) in enumerate(zip(page.dataoffsets, page.databytecounts, strict=True)):
+        page.parent.filehandle.seek(offset)
+        raw = np.frombuffer(zlib.decompress(page.parent.filehandle.read(count)), np.uint8).reshape(tall, 4 * across)
+        planes = np.cumsum(raw, axis=1, dtype=np.uint8).reshape(tall, 4, across)  # most significant byte first
+        cells = np.ascontiguousarray(planes.transpose(0, 2, 1)).view(">f4")[..., 0]
+        band, place = divmod(index, down * right)
+        row, column = divmod(place, right)
+        out[band, row * tall : (row + 1) * tall, column * across : (column + 1) * across] = cells
+    return out[:, :high, :wide]
+
+
+@pytest.fixture(scope="session")
+def decode_tiff():
+    return decoded

@@ -8,7 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 import xarray as xr
 from rasterio.crs import CRS
-from rasterio.transform import Affine, from_origin
+from rasterio.transform import Affine
 
 from planum.errors import FrameError, Problem
 from planum.records import Statement
@@ -31,7 +31,7 @@ class Raster:
     @property
     def transform(self) -> Affine:
         """Affine transform of the upper left corner."""
-        return from_origin(self.west, self.north, self.cell_m, self.cell_m)
+        return Affine(self.cell_m, 0.0, self.west, 0.0, -self.cell_m, self.north)
 
     @property
     def bounds(self) -> tuple[float, float, float, float]:

@@ -133,7 +133,7 @@ def _values(context: ReportContext) -> dict[str, Any]:
         "problem_rows": _problem_rows(context.problems),
         "aside_rows": _problem_rows(context.set_aside),
         "sections": [(label, _link(href)) for label, href in context.sections],
-        "files": [
+        "files": [  # a pattern such as slices/<code>_*.tif is shown, not linked
             (_link(name) if "*" not in name and "<" not in name else "", name, what) for name, what in context.files
         ],
     }
