@@ -225,7 +225,7 @@ def _facts(layout: SegyLayout, offset: int) -> dict[str, Any]:
         "extra_trace_headers": layout.extra_heads,
         "centred_on": offset,
         "text_encoding": layout.text_encoding,
-        "text": [printable(row) for row in layout.text],
+        "text": list(layout.text),
     }
 
 

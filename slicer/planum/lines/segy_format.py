@@ -140,13 +140,23 @@ FORMAT_NAMES = {
 }
 
 
+_COMMON = " .,:;()-+/=*'\"#_"
+_USUAL = {
+    name: np.array([c in _COMMON or (c.isascii() and c.isalnum()) for c in bytes(range(256)).decode(code)])
+    for name, code in (("ebcdic", "cp037"), ("ascii", "latin-1"))
+}
+"""For each byte: whether it stands for a letter, digit, blank or common sign."""
+
+_BLANK = {i: " " for i in range(256) if not chr(i).isprintable()}
+"""Control characters become blanks: the rows are shown to people."""
+
+
 def text_rows(block: bytes) -> tuple[list[str], str]:
     """Return the rows of a text header without trailing blanks and empty last rows, and "ebcdic" or "ascii"."""
-    texts = {"ebcdic": block.decode("cp037"), "ascii": block.decode("latin-1")}
-    # blanks are the commonest character in either encoding, and neither blank is printable ASCII in the other
-    name = max(texts, key=lambda k: (_share(texts[k]), k == "ebcdic"))
-    clean = "".join(c if c.isprintable() else " " for c in texts[name])
-    rows = [clean[i : i + 80].rstrip() for i in range(0, len(clean), 80)]
+    # blanks are the commonest character in either encoding, and neither blank is usual in the other
+    name = max(("ebcdic", "ascii"), key=lambda k: _share(block, k))
+    text = block.decode("cp037" if name == "ebcdic" else "latin-1").translate(_BLANK)
+    rows = [text[i : i + 80].rstrip() for i in range(0, len(text), 80)]
     while rows and not rows[-1]:
         rows.pop()
     return rows, name
@@ -154,9 +164,9 @@ def text_rows(block: bytes) -> tuple[list[str], str]:
 
 def is_text(block: bytes) -> bool:
     """Tell whether a block reads as text in EBCDIC or ASCII."""
-    return max(_share(block.decode("cp037")), _share(block.decode("latin-1"))) > 0.9
+    return max(_share(block, name) for name in _USUAL) > 0.9
 
 
-def _share(text: str) -> float:
-    """Share of letters, digits, blanks and common signs."""
-    return sum(c == " " or (c.isascii() and (c.isalnum() or c in ".,:;()-+/=*'\"#_")) for c in text) / max(1, len(text))
+def _share(block: bytes, name: str) -> float:
+    """Share of usual characters; 0 for nothing."""
+    return float(_USUAL[name][np.frombuffer(block, np.uint8)].mean()) if block else 0.0

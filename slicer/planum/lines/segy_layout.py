@@ -183,15 +183,17 @@ class _Finder:
         texts = self.texts(revision)
         declared = HEAD + TEXT * max(0, texts)
         fits = declared + size <= self.length
-        if fits and (n_samples > 0xFFFF or self.matches(declared, n_samples, size) or self.blank(declared)):
-            return declared
+        if n_samples > 0xFFFF and fits:
+            return declared  # trace headers cannot state so many: nothing to compare
+        # from the front: traces taken for text would be lost without a word where their size divides that of a text
         for offset in range(HEAD, self.length - size + 1, TEXT):
-            if offset != declared and self.matches(offset, n_samples, size):
-                self.warn(
-                    f"{(offset - HEAD) // TEXT} extended text header(s) found, {texts} declared", FILE["texts"].byte
-                )
+            if offset == declared and (self.blank(offset) or self.matches(offset, n_samples, size)):
+                return declared
+            if self.matches(offset, n_samples, size):
+                found = (offset - HEAD) // TEXT
+                self.warn(f"{found} extended text header(s) found, {texts} declared", FILE["texts"].byte)
                 return offset
-            if not self.text_or_zero(offset):
+            if offset >= declared and not self.text_or_zero(offset):
                 break
         if not fits:
             raise self.error(f"{texts} extended text headers declared; no trace fits after them", FILE["texts"].byte)

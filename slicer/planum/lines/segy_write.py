@@ -148,11 +148,12 @@ def _interval_field(file: str, interval_ns: float, unit: IntervalUnit, revision:
         raise _error(file, f"interval unit {unit!r}", allowed="ps, ns or us", key="interval_unit")
     exact = interval_ns / NS_PER[unit]
     most = 0xFFFF if revision == 2 else 0x7FFF
+    whole = np.rint(exact)
     # a millionth of a unit is the rounding of decimal fractions, not another interval
-    if exact > 0 and abs(exact - round(exact)) < 1e-6 * max(1.0, exact) and round(exact) <= most and round(exact) > 0:
-        return round(exact)
+    if 1 <= whole <= most and abs(exact - whole) < 1e-6 * exact:
+        return int(whole)
     if revision == 2 and 0 < exact < np.inf:
-        return min(round(exact), most)  # the 64-bit field has the exact one
+        return int(min(whole, most))  # the 64-bit field has the exact one
     raise _error(
         file,
         f"{interval_ns} ns is {exact:.9g} {unit}",
