@@ -163,15 +163,15 @@ def _choices(word: str, known: Sequence[str]) -> str:
 def _not_yet(data: Mapping[str, Any]) -> Iterator[tuple[Loc, tuple[str, str, str]]]:
     for path, (what, do) in NOT_YET.items():
         if len(path) == 1 and path[0] in data:
-            yield path, (f"{what} is not supported yet", "", do)
+            yield path, (f"not supported yet: {what}", "", do)
     for loc, _, table in _tables(data):
         for key in table:
             if (loc[0], key) in NOT_YET:
                 what, do = NOT_YET[loc[0], key]
-                yield (*loc, key), (f"{what} is not supported yet", "", do)
+                yield (*loc, key), (f"not supported yet: {what}", "", do)
         gain = table.get("recorded_gain") if loc[0] == "radar" else None
         if isinstance(gain, str) and gain.lower().endswith(".csv"):
-            came = f"a recorded gain from a file ({gain}) is not supported yet"
+            came = f"not supported yet: a recorded gain from a file ({gain})"
             yield (*loc, "recorded_gain"), (came, 'allowed are "none" and "unknown"', 'write "unknown" meanwhile')
 
 

@@ -149,7 +149,7 @@ def _unsupported(folder: Path) -> Iterator[Problem]:
             empty = False
         if _there(path) and not empty:
             do = "move it out of the survey folder to go on without it"
-            yield Problem(f"{name} ({what}) is not supported yet", "", do, file=name)
+            yield Problem(f"not supported yet: {what} ({name})", "", do, file=name)
 
 
 def _registers(folder: Path, config: SurveyConfig | None, text: str, roots: Sequence[Path]) -> Register:
@@ -161,6 +161,8 @@ def _registers(folder: Path, config: SurveyConfig | None, text: str, roots: Sequ
         return found
     for name in dict.fromkeys(grid.register_name for grid in config.grid if grid.files is None):
         found.join(read_register(folder, name, config, roots=roots))
+    if all(grid.files is None for grid in config.grid):
+        return found
     _, places = toml_text.parse(text, file="survey.toml")
     for i, grid in enumerate(config.grid):
         if grid.files is not None:

@@ -39,7 +39,7 @@ def check_places(rows: Sequence[RegisterRow]) -> list[Problem]:
                 row.problem(
                     "end_x_m",
                     f"line {row.grid}/{row.line} is not parallel to local x or y",
-                    "lines at an angle to the local axes are not supported yet",
+                    "not supported yet: lines at an angle to the local axes",
                     "turn the local frame of this grid",
                 )
             )
@@ -63,7 +63,7 @@ def _one_direction(grid: str, rows: Sequence[RegisterRow]) -> Iterator[Problem]:
                 "end_x_m",
                 f"grid {grid} has lines along {direction(first)} (line {first.line}) and along {direction(row)}"
                 f" (line {row.line})",
-                "two directions in one grid are not supported yet",
+                "not supported yet: two directions in one grid",
                 "give each direction its own [[grid]]",
             )
             return

@@ -147,7 +147,7 @@ def _entry(row: Row, names: Names) -> RegisterRow | None:
         came = f"last_trace {last} is not after first_trace {first or 0}"
         row.sheet.complain(row, "last_trace", came, "both count from the file's first trace, 0")
     if row.text("channel"):
-        came = "an antenna array (channel) is not supported yet"
+        came = "not supported yet: an antenna array (channel)"
         row.sheet.complain(row, "channel", came, "", "give one file and one row per channel, and leave the cell empty")
     radar, visit, part = names.radar(row, grid), names.visit(row, grid), row.index("part")
     if x0 is None or y0 is None or x1 is None or y1 is None:

@@ -40,7 +40,7 @@ def natural_key(text: str) -> tuple[tuple[int, int, str], ...]:
     parts = re.split(r"([0-9]+)", text.casefold())
     # compared as (length, digits): int() refuses the thousands of digits a hostile file may hold
     return tuple(
-        (1, len(p.lstrip("0")), p.lstrip("0")) if i % 2 else (0, 0, p) for i, p in enumerate(parts) if p or i % 2
+        (0, len(p.lstrip("0")), p.lstrip("0")) if i % 2 else (1, 0, p) for i, p in enumerate(parts) if p or i % 2
     )
 
 

@@ -30,7 +30,7 @@ class Places:
         wanted: Place = tuple(path)
         while wanted:
             plain = tuple(part for part in wanted if isinstance(part, str))
-            found = self._lines.get(wanted) or self._lines.get(plain)
+            found = self._lines.get(wanted) or self._lines.get(plain) or self._lines.get((*wanted, 0))
             if found:
                 return str(found)
             wanted = wanted[:-1]
