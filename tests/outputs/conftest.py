@@ -15,7 +15,7 @@ CELL = 0.05
 WEST, NORTH = 468_200.0, 5_412_330.0
 
 
-def make_slices(*, n: int = 8, shape: tuple[int, int] = (121, 160), crs: str = CRS) -> xr.Dataset:
+def make_slices(*, n: int = 5, shape: tuple[int, int] = (121, 160), crs: str = CRS) -> xr.Dataset:
     """A building's walls in speckle, a corner without data, one obstacle; depths 0.0 to 0.05 n + 0.05 m."""
     rng = np.random.default_rng(7)
     height, width = shape

@@ -10,7 +10,7 @@ from planum.outputs.stack import write_stack
 
 
 def test_bands_are_the_slices_in_order(tmp_path, slices, statements, decode_tiff):
-    """rasterio, and the bytes decoded by hand, give the same cells; every band names its depths and carries its own statement."""
+    """rasterio, and the bytes decoded by hand, give the same cells; every band carries its own statement."""
     path = tmp_path / "slices_all.tif"
     write_stack(path, slices, statements)
     with rasterio.open(path, driver="GTiff") as raster:
