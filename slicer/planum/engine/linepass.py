@@ -81,8 +81,8 @@ def run_row(pieces: Sequence[Piece], plan: SetPlan, row: int, *, section: bool =
 
 
 def _picture(amplitude: np.ndarray) -> np.ndarray:
-    """Grey values of a section: 128 is zero, full black and white at the 99th percentile."""
+    """Grey values of a section: 128 is zero, positive dark, black and white at the 99th percentile."""
     every = max(1, -(-amplitude.shape[0] // SECTION_TRACES))
     amplitude = amplitude[::every]
     high = float(np.percentile(np.abs(amplitude[:, ::2]), 99.0)) or 1.0
-    return np.clip(128.0 + 127.0 * amplitude / high, 0.0, 255.0).astype(np.uint8)
+    return np.clip(128.0 - 127.0 * amplitude / high, 0.0, 255.0).astype(np.uint8)

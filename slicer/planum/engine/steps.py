@@ -25,7 +25,7 @@ def find_steps() -> dict[str, Step]:
             step = entry.load()
             for attribute in ("name", "version", "reach", "takes", "gives", "Params"):
                 getattr(step, attribute)
-        except Exception as fault:  # noqa: BLE001 - a plug-in may fail in any way
+        except Exception as fault:  # a plug-in may fail in any way
             problem = Problem(
                 came=f"the step {entry.name!r} from {entry.value!r} cannot be loaded ({fault})",
                 do="mend or remove that package; the other steps work",
@@ -48,7 +48,9 @@ def get_step(name: str) -> Step:
     steps = find_steps()
     if name not in steps:
         raise RecipeError(
-            Problem(came=f"there is no step {name!r}", allowed=nearest(name, steps), key="recipe.steps", do="mend the name")
+            Problem(
+                came=f"there is no step {name!r}", allowed=nearest(name, steps), key="recipe.steps", do="mend the name"
+            )
         )
     return steps[name]
 

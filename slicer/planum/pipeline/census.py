@@ -81,7 +81,10 @@ def census(
             return replace(fault.problems[0], severity="warning")
         except OSError as fault:
             return Problem(
-                came=f"cannot be read ({fault.strerror or fault})", do="copy it again", file=source.name, severity="warning"
+                came=f"cannot be read ({fault.strerror or fault})",
+                do="copy it again",
+                file=source.name,
+                severity="warning",
             )
         store.save_json("census", source.facts_key(file_id), facts.model_dump(mode="json"))
         return facts
@@ -243,4 +246,6 @@ def _place(recording: Recording, trace: int) -> tuple[float, float] | None:
 
 
 def _plain(header: dict[str, Any]) -> dict[str, Any]:
-    return {k: v for k, v in header.items() if isinstance(v, (str, int, float, bool)) and v == v and k != "text"}
+    """Header facts that fit a record: plain, finite, without the textual header."""
+    plain = {k: v for k, v in header.items() if isinstance(v, (str, int, float, bool)) and k != "text"}
+    return {k: v for k, v in plain.items() if not isinstance(v, float) or np.isfinite(v)}

@@ -34,6 +34,8 @@ BOOK_VELOCITY = (0.10, 0.03)
 known."""
 GIVEN_ERROR = 0.05
 """Relative 1-sigma error assumed for a typed velocity that states none."""
+ALONG_ERROR = 0.005
+"""Relative 1-sigma error of distances along a line: a well-kept odometer or tape (common practice)."""
 SCAN_LINES = 12
 
 
@@ -170,13 +172,13 @@ def scanned_velocity(
         Conditioned, unmigrated cubes of one row each.
     """
     try:
-        found, curve = focus_scan(sections, zero_error_ns=zero_error_ns)
+        found, curve = focus_scan(sections, allowance=(zero_error_ns, ALONG_ERROR))
     except EvidenceError as fault:
         value, error = BOOK_VELOCITY
         problem = Problem(
             came=f"the data do not tell the velocity ({fault.problems[0].came}); {value} ± {error} m/ns is a guess",
             allowed="a velocity measured on the site",
-            do="give [ground] velocity_m_per_ns from a known depth or a common-midpoint sounding; depths may be a third off",
+            do="give [ground] velocity_m_per_ns from a known depth; until then depths may be a third off",
             key="ground.velocity_m_per_ns",
             severity="warning",
         )

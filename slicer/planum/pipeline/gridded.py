@@ -143,7 +143,9 @@ class _Set:
         shutil.rmtree(part, ignore_errors=True)
         root = zarr.open_group(part, mode="w", zarr_format=3)
         shape, chunk = (n, g.n_lines, g.n_along), (1, g.n_lines, g.n_along)
-        arrays = [_array(root, name, shape, chunk, "float32", ("slice", "line", "along")) for name in ("values", "left_out")]
+        arrays = [
+            _array(root, name, shape, chunk, "float32", ("slice", "line", "along")) for name in ("values", "left_out")
+        ]
         for k in range(n):
             strip = np.full((g.n_lines, g.n_along), np.nan, np.float32)
             for i, values in enumerate(kept):

@@ -3,10 +3,9 @@
 from __future__ import annotations
 
 import json
-import platform
+import shutil
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass, replace
-from importlib.metadata import version
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -14,149 +13,102 @@ import numpy as np
 import xarray as xr
 
 import planum
-from planum.constants import LIMIT_MARGIN, MASK_BETWEEN, MASK_OUTSIDE
+from planum.constants import CAUTIONS
 from planum.errors import Problem
+from planum.outputs.focus import draw_focus
 from planum.outputs.geopackage import ControlShape, GridShape, LineShape, SiteShapes, write_geopackage
 from planum.outputs.geotiff import write_slices
 from planum.outputs.netcdf import write_netcdf
 from planum.outputs.pictures import draw_contact_sheet, draw_slices
-from planum.outputs.raster import raster_of
+from planum.outputs.raster import plane, raster_of
+from planum.outputs.report import write_report
+from planum.outputs.section import DepthScale, draw_section
 from planum.outputs.stack import write_stack
-from planum.outputs.stretch import Stretch, stretch_of
+from planum.outputs.stretch import stretch_of
 from planum.outputs.writing import aside
+from planum.pipeline.telling import Drawn, best_slices, report_context
+from planum.pipeline.told import PRODUCTS_VERSION, RunFacts, statements, versions
 from planum.records import Facts, Plan, SetPlan, Statement, Strip, canon, key
-from planum.survey.control import ControlPoint
+from planum.scene.picture import render_safely
 
-__all__ = ["RunFacts", "section_key", "section_picture", "statements", "write_products"]
-
-PRODUCTS_VERSION = 1
-"""Raised when wording, pictures or formats change, so that an unchanged survey is written anew."""
+__all__ = ["section_key", "section_picture", "write_products"]
 
 Progress = Callable[[str, int, int], None]
+Attribute = str | int | float | bool | None
 
 
-@dataclass(frozen=True)
-class RunFacts:
-    """Everything a run's products tell besides the slices themselves."""
-
-    plan: Plan
-    control: tuple[ControlPoint, ...]
-    facts: Mapping[str, Facts]
-    warnings: tuple[Problem, ...]
-    set_aside: tuple[Problem, ...]
-    curve: Mapping[str, list[float]]
-    visits: Mapping[str, str]
-
-    def output_key(self) -> str:
-        """Return the name of this result by content: plan, wording and versions."""
-        told = [p.to_dict() for p in (*self.warnings, *self.set_aside)]
-        return key([PRODUCTS_VERSION, planum.__version__, self.plan, told, dict(self.visits)])
-
-    def without(self, failed: Sequence[Problem]) -> RunFacts:
-        """Return the facts with lines that failed in the second pass set aside as well."""
-        return replace(self, set_aside=(*self.set_aside, *failed))
-
-    def missing(self) -> list[str]:
-        """Name the rows of each set that have no recording, by their place across the lines."""
-        out = []
-        for s in self.plan.sets:
-            there = {e.row for e in s.entries}
-            across = "y" if s.geometry.direction == "x" else "x"
-            gone = [f"{m:.2f}" for i, m in enumerate(s.geometry.lines()) if i not in there]
-            if gone:
-                out.append(f"set {s.name}: no recording at {across} = {', '.join(gone)} m")
-        return out
-
-    def summary(self) -> dict[str, Any]:
-        """Return what a person wants to know first."""
-        plan, first = self.plan, self.plan.sets[0]
-        west, south, east, north = plan.bounds
-        return {
-            "lines": sum(len({e.row for e in s.entries}) for s in plan.sets),
-            "sets": [s.name for s in plan.sets],
-            "slices": len(plan.intervals_m),
-            "raster": f"{round((east - west) / plan.cell_m)} × {round((north - south) / plan.cell_m)} cells of {plan.cell_m:g} m",
-            "velocity": f"{first.velocity.value:.4f} ± {first.velocity.error:.4f} m/ns ({first.velocity.origin})",
-            "time_zero": str(first.zero),
-            "missing": self.missing(),
-            "limit_depth_m": first.limit_depth_m,
-            "notes": list(plan.notes),
-        }
-
-
-def section_key(plan: SetPlan, row: int, row_name: str) -> str:
+def section_key(plan: Plan, s: SetPlan, row: int, row_name: str) -> str:
     """Return what the picture of one row depends on, hashed."""
-    return key([PRODUCTS_VERSION, row_name, plan.name, row, plan.velocity, plan.separation_m])
+    return key([PRODUCTS_VERSION, row_name, s.name, row, s.velocity, s.separation_m, plan.intervals_m])
 
 
-def section_picture(path: Path, plan: SetPlan, row: int, strip: Strip, survey: Plan) -> None:
-    """Draw one row's section: raw, processed, migrated."""
-    with aside(path) as part:
-        part.write_bytes(b"")
-
-
-def statements(plan: Plan, stack: xr.Dataset, stretch: Stretch) -> tuple[Statement, ...]:
-    """Return one statement per slice; where sets differ the least certain speaks."""
-    s = max(plan.sets, key=lambda one: one.velocity.error / one.velocity.value)
-    migrated = any(step.name == "migrate" for step in s.chain)
-    spacing = max(one.geometry.line_step_m for one in plan.sets)
-    date = ", ".join(sorted({one.visit for one in plan.sets if one.visit})) or "not stated"
-    name = key(plan)
-    return tuple(
-        Statement(
-            quantity="mean envelope amplitude in the recorder's units",
-            top_m=top,
-            bottom_m=bottom,
-            statistic=plan.statistic,
-            velocity_m_per_ns=s.velocity.value,
-            velocity_error_m_per_ns=s.velocity.error,
-            velocity_origin=f"{s.velocity.origin}: {s.velocity.method}" if s.velocity.method else s.velocity.origin,
-            depth_error_m=float(error),
-            zero_rule=s.zero.method,
-            zero_error_ns=s.zero.error,
-            surface="the ground surface as walked",
-            date=date,
-            migration="migrated in 2-D, line by line, at one velocity" if migrated else "not migrated",
-            fill=f"filled between lines by a band-limited kernel held to the neighbouring lines' range within {LIMIT_MARGIN:.0%}",
-            line_spacing_m=spacing,
-            coverage_rule=f"empty beyond {MASK_BETWEEN:g} line spacing from a trace, {MASK_OUTSIDE:g} outside the outer lines",
-            resolution=plan.notes[0].rstrip(".").replace("Features", "features", 1) if plan.notes else "",
-            stretch=stretch.text,
-            survey=plan.title,
-            plan_key=name,
-            version=f"planum {plan.version}",
-        )
-        for (top, bottom), error in zip(plan.intervals_m, stack["depth_error"].values, strict=True)
+def section_picture(path: Path, plan: Plan, s: SetPlan, strip: Strip) -> None:
+    """Draw one row's section: raw, processed, migrated, with a depth axis and the slices' intervals."""
+    across = "y" if s.geometry.direction == "x" else "x"
+    names = ", ".join(dict.fromkeys(e.line for e in s.entries if e.row == strip.row))
+    v = s.velocity
+    draw_section(
+        path,
+        strip.section or {},
+        s.geometry.along(),
+        s.geometry.times(),
+        DepthScale(v, s.separation_m, plan.intervals_m),
+        title=f"Set {s.name}, line {names}, {across} = {s.geometry.lines()[strip.row]:.2f} m",
+        statement=f"Depth below the ground surface as walked at {v.value:.4f} ± {v.error:.4f} m/ns ({v.origin}); "
+        f"time zero ± {s.zero.error:.2f} ns; each panel has its own stretch, positive = dark. {CAUTIONS[0]}",
     )
 
 
-def shapes(run: RunFacts, stack: xr.Dataset) -> SiteShapes:
+def shapes(run: RunFacts, stack: xr.Dataset, linked: Mapping[tuple[str, str], str]) -> SiteShapes:
     """Return lines, grids, control points and coverage in the map frame."""
     lines, grids = [], []
     residuals: dict[str, float] = {}
+    pictures = {row: name for (_, row), name in linked.items()}
     for s in run.plan.sets:
         residuals |= dict(s.frame.residuals_m)
         for e in s.entries:
             coords = np.column_stack(s.frame.forward(*np.array([e.start, e.end]).T))
-            about = {"line": e.line, "row": e.row, "time_zero_ns": e.zero_ns[0][1], "gain": e.gain, "traces": e.last_trace - e.first_trace + 1}
+            about: dict[str, Attribute] = {
+                "line": e.line,
+                "row": e.row,
+                "time_zero_ns": e.zero_ns[0][1],
+                "gain": e.gain,
+                "traces": e.last_trace - e.first_trace + 1,
+                "section": pictures.get(f"{s.name}/{e.row}", ""),
+            }
             lines.append(LineShape(e.key, s.name, e.file, coords, about))
-        g = s.geometry
-        a0, a1 = g.along()[[0, -1]]
-        c0, c1 = g.lines()[[0, -1]]
-        corners = np.array([[a0, c0], [a1, c0], [a1, c1], [a0, c1]])
-        corners = corners if g.direction == "x" else corners[:, ::-1]
-        about = {
-            "set": s.name, "radar": s.radar, "visit": s.visit, "line_spacing_m": g.line_step_m, "trace_spacing_m": g.along_step_m,
-            "rotation_deg": s.frame.rotation_deg, "scale": s.frame.scale, "placing": s.frame.origin, "placing_error_m": s.frame.error_m,
-        }  # fmt: skip
-        grids.append(GridShape(s.grid, np.column_stack(s.frame.forward(*corners.T)), about))
+        grids.append(_grid_shape(s))
     control = [
-        ControlShape(c.point, c.easting_m, c.northing_m, residuals.get(c.point), {"grid": c.grid or "site", "local_x_m": c.local_x_m, "local_y_m": c.local_y_m})
+        ControlShape(
+            c.point,
+            c.easting_m,
+            c.northing_m,
+            residuals.get(c.point),
+            {"grid": c.grid or "site", "local_x_m": c.local_x_m, "local_y_m": c.local_y_m},
+        )
         for c in run.control
     ]
-    return SiteShapes(
-        crs=run.plan.crs or "", lines=lines, grids=grids, control=control, coverage=stack["coverage"].values, raster=raster_of(stack)
-    )
+    covered = stack["coverage"].values
+    return SiteShapes(run.plan.crs or "", lines, grids, control, coverage=covered, raster=raster_of(stack))
+
+
+def _grid_shape(s: SetPlan) -> GridShape:
+    g = s.geometry
+    (a0, a1), (c0, c1) = g.along()[[0, -1]], g.lines()[[0, -1]]
+    corners = np.array([[a0, c0], [a1, c0], [a1, c1], [a0, c1]])
+    corners = corners if g.direction == "x" else corners[:, ::-1]
+    about: dict[str, Attribute] = {
+        "set": s.name,
+        "radar": s.radar,
+        "visit": s.visit,
+        "line_spacing_m": g.line_step_m,
+        "trace_spacing_m": g.along_step_m,
+        "rotation_deg": s.frame.rotation_deg,
+        "scale": s.frame.scale,
+        "placing": s.frame.origin,
+        "placing_error_m": s.frame.error_m,
+    }
+    return GridShape(s.grid, np.column_stack(s.frame.forward(*corners.T)), about)
 
 
 def write_products(
@@ -167,12 +119,17 @@ def write_products(
     sections: Mapping[tuple[str, int], Path],
     token: str,
     progress: Progress | None = None,
-) -> None:
-    """Write every product of a run into an empty folder; ``run.json`` comes last and lists the others."""
+) -> RunFacts:
+    """Write every product of a run into an empty folder; ``run.json`` comes last and lists the others.
+
+    Returns
+    -------
+    RunFacts
+        With what could not be drawn among the warnings.
+    """
     plan = run.plan
     stretch = stretch_of(stack)
     told = statements(plan, stack, stretch)
-    n = len(told)
 
     def step(stage: str) -> Callable[[int, int], None]:
         return lambda done, total: progress(stage, done, total) if progress else None
@@ -181,11 +138,59 @@ def write_products(
     write_stack(folder / "slices_all.tif", stack, told)
     write_netcdf(folder / "slices.nc", stack, told, history=f"planum {plan.version}, plan {key(plan)}")
     changed = max((s.visit for s in plan.sets if s.visit), default="1970-01-01")
-    write_geopackage(folder / "site.gpkg", shapes(run, stack), told, changed=changed)
     pictures = folder / "pictures"
-    draw_slices(pictures, stack, told, stretch, progress=step("drawing slices"))
-    draw_contact_sheet(pictures / "contact-sheet.png", stack, told, stretch)
+    linked = _copy_sections(pictures, plan, sections)
+    write_geopackage(folder / "site.gpkg", shapes(run, stack, linked), told, changed=changed)
+    drawn = draw_slices(pictures, stack, told, stretch, progress=step("drawing slices"))
+    named = {"contact": pictures / "contact-sheet.png"}
+    draw_contact_sheet(named["contact"], stack, told, stretch)
+    if run.curve:
+        named["focus"] = pictures / "velocity-focus.png"
+        draw_focus(named["focus"], run.curve, plan.sets[0].velocity)
+    if progress:
+        progress("drawing the isosurface", 0, 1)
+    problem = draw_scene(folder / "slices.nc", pictures / "isosurface.png", shapes(run, stack, linked))
+    if problem is None:
+        named["isosurface"] = pictures / "isosurface.png"
+    else:
+        run = replace(run, warnings=(*run.warnings, replace(problem, severity="warning")))
+    if progress:
+        progress("drawing the isosurface", 1, 1)
+    shown = Drawn(named, drawn, best_slices(_levels(stack)), {label: name for (label, _), name in linked.items()})
+    context = report_context(run, told, shown, folder)
+    write_report(folder / "report.html", context)
     _write_record(folder, run, told, token)
+    return run
+
+
+def draw_scene(slices: Path, picture: Path, site: SiteShapes) -> Problem | None:
+    """Draw the isosurface in a process of its own; a machine that cannot draw costs this picture only."""
+    return render_safely(slices, picture, lines=[(line.name, line.coords) for line in site.lines])
+
+
+def _levels(stack: xr.Dataset) -> list[float]:
+    """Return each slice's 99th percentile, from a thinned plane."""
+    every = max(1, stack.sizes["y"] * stack.sizes["x"] // 40_000)
+    planes = (plane(stack, i).ravel()[::every] for i in range(stack.sizes["depth"]))
+    return [float(np.nanpercentile(p, 99)) if np.isfinite(p).any() else 0.0 for p in planes]
+
+
+def _copy_sections(pictures: Path, plan: Plan, sections: Mapping[tuple[str, int], Path]) -> dict[tuple[str, str], str]:
+    """Copy one section picture per row; return (label, entry's set and row) to the path within the run folder."""
+    linked = {}
+    for s in plan.sets:
+        across = "y" if s.geometry.direction == "x" else "x"
+        for row, place in enumerate(s.geometry.lines()):
+            path = sections.get((s.name, row))
+            if path is None:
+                continue
+            lines = ", ".join(dict.fromkeys(e.line for e in s.entries if e.row == row))
+            stem = "".join(c if c.isalnum() or c in "-_" else "-" for c in f"{s.name}_{row:03d}_{lines}")
+            (pictures / "sections").mkdir(parents=True, exist_ok=True)
+            shutil.copyfile(path, pictures / "sections" / f"{stem}.png")
+            label = f"{s.name}, line {lines}, {across} = {place:.2f} m"
+            linked[label, f"{s.name}/{row}"] = f"pictures/sections/{stem}.png"
+    return linked
 
 
 def _write_record(folder: Path, run: RunFacts, told: Sequence[Statement], token: str) -> None:
@@ -197,8 +202,7 @@ def _write_record(folder: Path, run: RunFacts, told: Sequence[Statement], token:
     record = {
         "output_key": token,
         "version": planum.__version__,
-        "versions": {name: version(name) for name in ("numpy", "scipy", "xarray", "rasterio", "pyproj")}
-        | {"python": platform.python_version()},
+        "versions": versions(),
         "plan": run.plan.model_dump(mode="json"),
         "facts": {name: _digest(f) for name, f in run.facts.items()},
         "velocity_curve": dict(run.curve),

@@ -17,7 +17,7 @@ from planum.errors import Problem, RecipeError, nearest
 from planum.records import SetFacts, StepSpec
 from planum.survey.config import DEFAULT_STEPS
 
-__all__ = ["resolve_chain", "settings", "toml"]
+__all__ = ["resolve_chain", "settings", "settings_text", "toml"]
 
 
 def settings(recipe: Mapping[str, Any], *, file: str = "survey.toml") -> dict[str, BaseModel]:
@@ -75,19 +75,20 @@ def _problem(error: Any, step: str, model: type[BaseModel], file: str) -> Proble
     return Problem(came=f"{error['msg']} (got {error['input']!r})", do="mend the value", file=file, key=key)
 
 
-def resolve_chain(chosen: Mapping[str, BaseModel], facts: SetFacts, *, until: str | None = None) -> tuple[StepSpec, ...]:
+def resolve_chain(
+    chosen: Mapping[str, BaseModel], facts: SetFacts, *, until: str | None = None
+) -> tuple[StepSpec, ...]:
     """Fill in what is automatic from the set's facts, step by step, and return the chain as plain numbers.
 
     Each step learns from the typical traces as they arrive at it. ``until`` stops before the step of that name.
     """
     chain: list[StepSpec] = []
-    for name, params in chosen.items():
+    for name, wanted in chosen.items():
         if name == until:
             break
         step = get_step(name)
         learn = getattr(step, "learn", None)
-        if learn is not None:
-            params = learn(facts, params)
+        params = wanted if learn is None else learn(facts, wanted)
         spec = StepSpec(name=name, version=step.version, params=params.model_dump(mode="json"))
         chain.append(spec)
         if step.reach == "trace" and step.gives == "voltage":
@@ -105,6 +106,12 @@ def toml(chain: Sequence[StepSpec]) -> str:
         for name, value in spec.params.items():
             rows.append(_toml_row(name, value))
     return "\n".join(rows) + "\n"
+
+
+def settings_text(params: Mapping[str, Any]) -> str:
+    """Return a step's settings in one line for people."""
+    rows = [_toml_row(name, value) for name, value in params.items() if value is not None]
+    return ", ".join(row.removeprefix("# ") for row in rows) or "no settings"
 
 
 def _toml_row(name: str, value: Any) -> str:

@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Callable, Mapping, Sequence
 from concurrent.futures import Executor
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
@@ -144,7 +144,7 @@ def _frames(survey: Survey) -> dict[str, Similarity]:
             if survey.config.survey.crs and grid.positions == "register":
                 raise FrameError(
                     Problem(
-                        came=f"grid {grid.name} has no control points, and the survey names the crs {survey.config.survey.crs}",
+                        came=f"grid {grid.name} has no control points, and the survey names a crs",
                         allowed="at least two points with local and map coordinates",
                         do="add control.csv, or leave out crs to stay in the local frame",
                         file="control.csv",
@@ -165,9 +165,7 @@ def _draft(
     radar = survey.config.radar_named(lines[0].row.radar)
     zeros, zero = time_zero(lines, radar)
     gains = balance(lines)
-    entries = [
-        _entry(name, line, z, g, warnings) for line, z, g in zip(lines, zeros, gains, strict=True)
-    ]
+    entries = [_entry(name, line, z, g, warnings) for line, z, g in zip(lines, zeros, gains, strict=True)]
     dt = float(np.median([line.facts.interval_ns for line in lines]))
     period = 1e3 / radar.centre_frequency_mhz
     before = min(math.floor(min(zeros) / dt + 1e-9), math.ceil(1.5 * period / dt))
@@ -332,7 +330,7 @@ def _intervals(
     if len(kept) < len(wanted):
         warnings.append(
             Problem(
-                came=f"{len(wanted) - len(kept)} of {len(wanted)} slices lie deeper than the recordings ({deepest:.2f} m)",
+                came=f"{len(wanted) - len(kept)} of {len(wanted)} slices lie below the record ({deepest:.2f} m)",
                 do="they are left out",
                 file="survey.toml",
                 key="slices.bottom_m",
@@ -386,10 +384,5 @@ def _notes(first: _Draft, sets: Sequence[SetPlan], velocity: Velocity) -> list[s
     if dip < 60.0:
         notes.append(f"Reflectors steeper than {dip:.0f}° along the line alias at {step:.3f} m between traces.")
     if len(sets) > 1:
-        notes.append("Grids and visits share one map but are not balanced against each other: steps at seams may be false.")
+        notes.append("Grids and visits are not balanced against each other: steps at their seams may be false.")
     return notes
-
-
-def renamed(problem: Problem, name: str) -> Problem:
-    """Return the problem with the file named as the survey names it."""
-    return replace(problem, file=name)

@@ -11,7 +11,7 @@ import json
 import os
 from collections.abc import Callable, Sequence
 from concurrent.futures import Executor, ThreadPoolExecutor
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
 
@@ -23,14 +23,16 @@ from planum.pipeline.census import Source, census, in_order
 from planum.pipeline.estimate import Line
 from planum.pipeline.gridded import grid_stack, open_stack
 from planum.pipeline.passes import row_key, strip_of
-from planum.pipeline.products import RunFacts, section_key, section_picture, write_products
+from planum.pipeline.products import section_key, section_picture, write_products
+from planum.pipeline.recipe import toml
 from planum.pipeline.resolve import Resolution, resolve
 from planum.pipeline.store import Store
-from planum.records import Facts, Plan, SetPlan
+from planum.pipeline.told import RunFacts
+from planum.records import Plan, SetPlan
 from planum.survey.folder import Survey, read_survey
 from planum.survey.register import RegisterRow
 
-__all__ = ["RunResult", "map_site", "plan_site", "read_run", "sources_of"]
+__all__ = ["RunResult", "map_site", "plan_site", "read_run", "recipe_text", "sources_of"]
 
 Progress = Callable[[str, int, int], None]
 
@@ -94,7 +96,7 @@ def map_site(
 def _run(
     survey: Survey, final: Path, store: Store, executor: Executor, plan_file: Path | None, progress: Progress | None
 ) -> RunResult:
-    found, lines, aside = _facts(survey, store, executor, progress)
+    lines, aside = _facts(survey, store, executor, progress)
     if plan_file is None:
         resolution = resolve(survey, lines, store=store, executor=executor, set_aside=aside, progress=progress)
     else:
@@ -118,13 +120,13 @@ def _run(
         run = run.without(failed)
     stack = open_stack(grid_stack(plan, rows, store, progress=progress), plan)
     sections = {
-        (s.name, row): store.path("sections", section_key(s, row, k), ".png")
+        (s.name, row): store.path("sections", section_key(plan, s, row, k), ".png")
         for s in plan.sets
         for row, k in enumerate(rows[s.name])
         if k is not None
     }
     folder = exchange.aside(final, token)
-    write_products(folder, stack, run, sections=sections, token=token, progress=progress)
+    run = write_products(folder, stack, run, sections=sections, token=token, progress=progress)
     (folder / exchange.MARK).unlink()
     exchange.publish(folder, final)
     return RunResult(final, run.set_aside, run.warnings, changed=True, summary=run.summary())
@@ -137,7 +139,7 @@ def plan_site(
     survey = read_survey(Path(site), roots=roots)
     store = Store(Path(site) / "work")
     with ThreadPoolExecutor(workers or os.cpu_count() or 1) as executor:
-        _, lines, aside = _facts(survey, store, executor, progress)
+        lines, aside = _facts(survey, store, executor, progress)
         return resolve(survey, lines, store=store, executor=executor, set_aside=aside, progress=progress).plan
 
 
@@ -163,18 +165,28 @@ def read_run(path: Path) -> tuple[Plan, dict[str, Any]]:
         ) from fault
 
 
+def recipe_text(site: Path, *, progress: Progress | None = None) -> str:
+    """Return the resolved recipe of every set as TOML."""
+    plan = plan_site(site, progress=progress)
+    return "\n".join(f"# set {s.name}\n{toml(s.chain)}" for s in plan.sets)
+
+
 def sources_of(survey: Survey) -> list[tuple[RegisterRow, Source]]:
     """Return every register row with the file it is read from and how."""
     out = []
     for row in survey.rows:
         grid, radar = survey.grid(row), survey.radar(row)
         raw = grid.raw
-        layout = raw and RawLayout(
-            n_samples=raw.samples,
-            header_bytes=raw.header_bytes,
-            bytes_before_trace=raw.trace_header_bytes,
-            sample_type=raw.sample_type,
-            byte_order=">" if raw.byte_order == "big" else "<",
+        layout = (
+            None
+            if raw is None
+            else RawLayout(
+                n_samples=raw.samples,
+                header_bytes=raw.header_bytes,
+                bytes_before_trace=raw.bytes_before_trace,
+                sample_type=raw.sample_type,
+                byte_order=raw.byte_order_mark,
+            )
         )
         options = ReadOptions(
             interval_ns=radar.sample_interval_ns,
@@ -192,32 +204,34 @@ def sources_of(survey: Survey) -> list[tuple[RegisterRow, Source]]:
 
 def _facts(
     survey: Survey, store: Store, executor: Executor, progress: Progress | None
-) -> tuple[list[Facts | Problem], list[Line], list[Problem]]:
+) -> tuple[list[Line], list[Problem]]:
     rows = sources_of(survey)
     found = census([source for _, source in rows], store, executor=executor, progress=progress)
     lines, aside = [], list(survey.set_aside)
     for (row, source), facts in zip(rows, found, strict=True):
         if isinstance(facts, Problem):
-            aside.append(facts if facts.line else Problem(**{**facts.to_dict(), "line": row.line}))
+            aside.append(replace(facts, line=facts.line or row.line))
         else:
             lines.append(Line(row, source, facts))
     if not lines:
         raise SurveyError([Problem(came="no line can be used", do="see below what is wrong with each"), *aside])
-    return found, lines, aside
+    return lines, aside
 
 
 def _noticed(lines: Sequence[Line]) -> list[Problem]:
     """Return what the census saw: reader's warnings, dead and clipped traces."""
     out = []
     for line in lines:
-        known = {"file": line.row.file, "line": line.row.line, "severity": "warning"}
-        out += [Problem(**{**p, **known}) for p in line.facts.problems]
+        where = Problem(came="", file=line.row.file, line=line.row.line, severity="warning")
+        out += [replace(Problem(**p), file=where.file, line=where.line) for p in line.facts.problems]
         dead, clipped = len(line.facts.dead), len(line.facts.clipped)
         if dead:
-            out.append(Problem(came=f"{dead} dead trace(s)", do="runs of up to 3 are filled, longer ones left out", **known))  # type: ignore[arg-type]
+            out.append(
+                replace(where, came=f"{dead} dead trace(s)", do="runs of up to 3 are filled, longer ones left out")
+            )
         if clipped > 0.02 * line.facts.n_traces:
             share = clipped / line.facts.n_traces
-            out.append(Problem(came=f"{share:.0%} of the traces are clipped", do="amplitudes there are lower bounds", **known))  # type: ignore[arg-type]
+            out.append(replace(where, came=f"{share:.0%} of the traces are clipped", do="amplitudes are lower bounds"))
     return out
 
 
@@ -232,24 +246,28 @@ def _second_pass(
             rows[s.name][row] = row_key(s, row)
             jobs.append((s, row, str(rows[s.name][row])))
 
-    def one(job: tuple[SetPlan, int, str]) -> Any:
+    def one(job: tuple[SetPlan, int, str]) -> Problem | None:
         s, row, name = job
-        picture = store.path("sections", section_key(s, row, name), ".png")
-        if store.load_array("rows", name) is not None and store.load_array("flags", name) is not None and picture.is_file():
+        picture = store.path("sections", section_key(plan, s, row, name), ".png")
+        if (
+            store.load_array("rows", name) is not None
+            and store.load_array("flags", name) is not None
+            and picture.is_file()
+        ):
             return None
         strip = strip_of(survey.folder, s, row, section=True, roots=survey.roots)
-        if not isinstance(strip, Problem):
-            store.save_array("flags", name, strip.flag)
-            store.save_array("rows", name, strip.values)
-        return strip
+        if isinstance(strip, Problem):
+            return strip
+        store.save_array("flags", name, strip.flag)
+        store.save_array("rows", name, strip.values)
+        section_picture(picture, plan, s, strip)
+        return None
 
     failed = []
-    for done, ((s, row, name), strip) in enumerate(zip(jobs, in_order(executor, one, jobs), strict=True), 1):
-        if isinstance(strip, Problem):
-            failed.append(strip)
+    for done, ((s, row, _), problem) in enumerate(zip(jobs, in_order(executor, one, jobs), strict=True), 1):
+        if problem is not None:
+            failed.append(problem)
             rows[s.name][row] = None
-        elif strip is not None:
-            section_picture(store.path("sections", section_key(s, row, name), ".png"), s, row, strip, plan)
         if progress:
             progress("migrating lines", done, len(jobs))
     if len(failed) == len(jobs):
@@ -268,5 +286,3 @@ def _whole(final: Path, token: str) -> bool:
         )
     except (OSError, ValueError, KeyError, TypeError):
         return False
-
-

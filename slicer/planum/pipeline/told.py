@@ -1,0 +1,117 @@
+"""What a run tells of itself: facts, and one statement per slice."""
+
+from __future__ import annotations
+
+import platform
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, replace
+from importlib.metadata import version
+from typing import Any
+
+import xarray as xr
+
+import planum
+from planum.constants import LIMIT_MARGIN, MASK_BETWEEN, MASK_OUTSIDE
+from planum.errors import Problem
+from planum.outputs.stretch import Stretch
+from planum.records import Facts, Plan, Statement, key
+from planum.survey.control import ControlPoint
+
+__all__ = ["PRODUCTS_VERSION", "RunFacts", "statements", "versions"]
+
+PRODUCTS_VERSION = 1
+"""Raised when wording, pictures or formats change, so that an unchanged survey is written anew."""
+
+FILL = f"filled between lines by a band-limited kernel held to the neighbouring lines' range within {LIMIT_MARGIN:.0%}"
+COVERAGE_RULE = f"empty beyond {MASK_BETWEEN:g} line spacing from a trace, {MASK_OUTSIDE:g} outside the outer lines"
+
+
+@dataclass(frozen=True)
+class RunFacts:
+    """Everything a run's products tell besides the slices themselves."""
+
+    plan: Plan
+    control: tuple[ControlPoint, ...]
+    facts: Mapping[str, Facts]
+    warnings: tuple[Problem, ...]
+    set_aside: tuple[Problem, ...]
+    curve: Mapping[str, list[float]]
+    visits: Mapping[str, str]
+
+    def output_key(self) -> str:
+        """Return the name of this result by content: plan, wording and versions."""
+        told = [p.to_dict() for p in (*self.warnings, *self.set_aside)]
+        return key([PRODUCTS_VERSION, planum.__version__, self.plan, told, dict(self.visits)])
+
+    def without(self, failed: Sequence[Problem]) -> RunFacts:
+        """Return the facts with lines that failed in the second pass set aside as well."""
+        return replace(self, set_aside=(*self.set_aside, *failed))
+
+    def missing(self) -> list[str]:
+        """Name the rows of each set that have no recording, by their place across the lines."""
+        out = []
+        for s in self.plan.sets:
+            there = {e.row for e in s.entries}
+            across = "y" if s.geometry.direction == "x" else "x"
+            gone = [f"{m:.2f}" for i, m in enumerate(s.geometry.lines()) if i not in there]
+            if gone:
+                out.append(f"set {s.name}: no recording at {across} = {', '.join(gone)} m")
+        return out
+
+    def summary(self) -> dict[str, Any]:
+        """Return what a person wants to know first."""
+        plan, first = self.plan, self.plan.sets[0]
+        west, south, east, north = plan.bounds
+        columns, rows = round((east - west) / plan.cell_m), round((north - south) / plan.cell_m)
+        return {
+            "lines": sum(len({e.row for e in s.entries}) for s in plan.sets),
+            "sets": [s.name for s in plan.sets],
+            "slices": len(plan.intervals_m),
+            "raster": f"{columns} × {rows} cells of {plan.cell_m:g} m",
+            "velocity": f"{first.velocity.value:.4f} ± {first.velocity.error:.4f} m/ns ({first.velocity.origin})",
+            "time_zero": str(first.zero),
+            "missing": self.missing(),
+            "limit_depth_m": first.limit_depth_m,
+            "notes": list(plan.notes),
+        }
+
+
+def statements(plan: Plan, stack: xr.Dataset, stretch: Stretch) -> tuple[Statement, ...]:
+    """Return one statement per slice; where sets differ the least certain speaks."""
+    s = max(plan.sets, key=lambda one: one.velocity.error / one.velocity.value)
+    migrated = any(step.name == "migrate" for step in s.chain)
+    spacing = max(one.geometry.line_step_m for one in plan.sets)
+    date = ", ".join(sorted({one.visit for one in plan.sets if one.visit})) or "not stated"
+    name = key(plan)
+    return tuple(
+        Statement(
+            quantity="mean envelope amplitude in the recorder's units",
+            top_m=top,
+            bottom_m=bottom,
+            statistic=plan.statistic,
+            velocity_m_per_ns=s.velocity.value,
+            velocity_error_m_per_ns=s.velocity.error,
+            velocity_origin=f"{s.velocity.origin}: {s.velocity.method}" if s.velocity.method else s.velocity.origin,
+            depth_error_m=float(error),
+            zero_rule=s.zero.method,
+            zero_error_ns=s.zero.error,
+            surface="the ground surface as walked",
+            date=date,
+            migration="migrated in 2-D, line by line, at one velocity" if migrated else "not migrated",
+            fill=FILL,
+            line_spacing_m=spacing,
+            coverage_rule=COVERAGE_RULE,
+            resolution=plan.notes[0].rstrip(".").replace("Features", "features", 1) if plan.notes else "",
+            stretch=stretch.text,
+            survey=plan.title,
+            plan_key=name,
+            version=plan.version,
+        )
+        for (top, bottom), error in zip(plan.intervals_m, stack["depth_error"].values, strict=True)
+    )
+
+
+def versions() -> dict[str, str]:
+    """Return the versions a result depends on."""
+    found = {name: version(name) for name in ("numpy", "scipy", "xarray", "rasterio", "pyproj")}
+    return {"planum": planum.__version__, "python": platform.python_version(), **found}
