@@ -63,10 +63,17 @@ def test_a_machine_that_draws_has_no_problem() -> None:
     assert rendering_problem() is None
 
 
-def test_asking_does_not_load_the_drawing_library() -> None:
+@pytest.mark.parametrize(
+    "use",
+    [
+        "from planum.scene.probe import rendering_problem; rendering_problem(command=['/nowhere'])",
+        "from planum.scene.picture import render_safely; render_safely('a.nc', 'b.png', command=['/nowhere'])",
+    ],
+)
+def test_asking_does_not_load_the_drawing_library(use: str) -> None:
+    """A run must outlive a machine where the library cannot even be loaded."""
     code = (
-        "import sys; from planum.scene.probe import rendering_problem; rendering_problem(command=['/nowhere']);"
-        "sys.exit(any(m.split('.')[0] in {'pyvista', 'vtkmodules', 'vtk'} for m in sys.modules))"
+        f"import sys; {use};sys.exit(any(m.split('.')[0] in {{'pyvista', 'vtkmodules', 'vtk'}} for m in sys.modules))"
     )
     assert subprocess.run(script(code), check=False).returncode == 0
 

@@ -82,6 +82,32 @@ assert all(a.prop.style.lower() == "surface" for n, a in plotter.actors.items() 
 plotter.close()
 """
 
+CLOSING = """
+import sys
+from pathlib import Path
+import xarray as xr
+from planum.viewer import window
+
+connect = window.Window.connect
+
+def connect_and_leave(self):
+    connect(self)
+    keyboard = self.plotter.iren.interactor
+
+    def leave(step):
+        keyboard.SetKeySym("q")
+        keyboard.SetKeyCode("q")
+        keyboard.InvokeEvent("KeyPressEvent")
+
+    self.plotter.add_timer_event(max_steps=1, duration=200, callback=leave)
+
+window.Window.connect = connect_and_leave
+window.rendering_problem = lambda: None  # asked in the other test
+slices = xr.open_dataset(Path(sys.argv[1]) / "slices.nc", engine="h5netcdf")
+window.open_window(slices, slice_depth=0.8)
+sys.stdout.write("closed")
+"""
+
 
 def test_without_a_screen_the_error_names_the_other_way(ring: xr.Dataset, monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr(sys, "platform", "linux")
@@ -99,16 +125,23 @@ def test_a_machine_that_cannot_draw_is_told_before_a_window_opens(
         window.open_window(ring)
 
 
+def under_xvfb(code: str, folder: Path) -> subprocess.CompletedProcess[str]:
+    command = ["xvfb-run", "-a", sys.executable, "-c", code, str(folder)]
+    return subprocess.run(command, capture_output=True, text=True, timeout=240, check=False)
+
+
+@pytest.mark.system("xvfb-run")
+def test_the_window_stays_open_until_it_is_closed(ring: xr.Dataset, tmp_path: Path) -> None:
+    """Left to itself it would wait for ever: only the key ends it before the time limit."""
+    ring.to_netcdf(tmp_path / "slices.nc", engine="h5netcdf")
+    done = under_xvfb(CLOSING, tmp_path)
+    assert (done.returncode, done.stdout) == (0, "closed"), done.stderr[-2000:]
+
+
 @pytest.mark.system("xvfb-run")
 def test_the_window_obeys_keys_and_sliders(ring: xr.Dataset, tmp_path: Path) -> None:
     ring.to_netcdf(tmp_path / "slices.nc", engine="h5netcdf")
-    done = subprocess.run(
-        ["xvfb-run", "-a", sys.executable, "-c", SESSION, str(tmp_path)],
-        capture_output=True,
-        text=True,
-        timeout=240,
-        check=False,
-    )
+    done = under_xvfb(SESSION, tmp_path)
     assert done.returncode == 0, done.stderr[-2000:]
     opened, deeper, helped = (
         np.asarray(Image.open(tmp_path / f"{name}.png").convert("RGB")).astype(int)

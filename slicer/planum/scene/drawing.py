@@ -23,6 +23,7 @@ __all__ = [
     "draw_text",
     "greys",
     "light",
+    "pixels",
     "write",
 ]
 
@@ -181,6 +182,26 @@ def aim(
     camera.position = focus + distance * back
     camera.up = (0.0, 0.0, 1.0)
     plotter.renderer.ResetCameraClippingRange()
+
+
+def pixels(scene: Scene, *, size: tuple[int, int], scale: float) -> np.ndarray:
+    """Draw the whole scene off screen; return (height, width, 3) bytes. ``scale`` multiplies widths and letters."""
+    plotter = pv.Plotter(off_screen=True, window_size=list(size), lighting="none")
+    try:
+        light(plotter)
+        draw_frame(plotter, scene, scale=scale)
+        actor = draw_plane(plotter, scene, scale=scale)
+        draw_isosurface(plotter, scene)
+        draw_lines(plotter, scene, scale=scale)
+        draw_text(plotter, scene, scale=scale)
+        if actor is not None:
+            draw_legend(plotter, actor)
+        aim(plotter, scene)
+        # soft shade where surfaces meet: a wall stands in its slice instead of floating above it
+        plotter.enable_ssao(radius=0.04 * scene.width_m, bias=0.002 * scene.width_m, kernel_size=32, blur=True)
+        return np.asarray(plotter.screenshot(return_img=True))[..., :3]
+    finally:
+        plotter.close()
 
 
 def write(

@@ -1,4 +1,7 @@
-"""The scene as a PNG, drawn off screen; in a process of its own where a crash must not take the run down."""
+"""The scene as a PNG, drawn off screen; in a process of its own where a crash must not take the run down.
+
+The drawing library is loaded only by the process that draws: a run on a machine that cannot load it goes on.
+"""
 
 from __future__ import annotations
 
@@ -8,28 +11,18 @@ import sys
 import tempfile
 from collections.abc import Sequence
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
-import pyvista as pv
-import xarray as xr
 from PIL import Image
 from PIL.PngImagePlugin import PngInfo
 
 from planum.errors import Problem
-from planum.scene.build import Lines, Scene, build_scene
-from planum.scene.drawing import (
-    aim,
-    draw_frame,
-    draw_isosurface,
-    draw_legend,
-    draw_lines,
-    draw_plane,
-    draw_text,
-    light,
-)
 from planum.scene.environment import prepare_environment
 from planum.scene.probe import run_drawing
+
+if TYPE_CHECKING:
+    from planum.scene.build import Lines, Scene
 
 __all__ = ["SIZE", "render", "render_safely"]
 
@@ -51,23 +44,10 @@ def render(scene: Scene, path: Path, *, size: tuple[int, int] = SIZE) -> None:
         Width and height in pixels.
     """
     prepare_environment()
-    scale = _FINER * size[0] / SIZE[0]
-    plotter = pv.Plotter(off_screen=True, window_size=[_FINER * side for side in size], lighting="none")
-    try:
-        light(plotter)
-        draw_frame(plotter, scene, scale=scale)
-        actor = draw_plane(plotter, scene, scale=scale)
-        draw_isosurface(plotter, scene)
-        draw_lines(plotter, scene, scale=scale)
-        draw_text(plotter, scene, scale=scale)
-        if actor is not None:
-            draw_legend(plotter, actor)
-        aim(plotter, scene)
-        plotter.enable_ssao(radius=0.04 * scene.width_m, bias=0.002 * scene.width_m, kernel_size=32, blur=True)
-        pixels = plotter.screenshot(return_img=True)
-    finally:
-        plotter.close()
-    image = Image.fromarray(np.asarray(pixels)[..., :3]).resize(size, Image.Resampling.BOX)
+    from planum.scene.drawing import pixels  # noqa: PLC0415 - see above
+
+    fine = pixels(scene, size=(_FINER * size[0], _FINER * size[1]), scale=_FINER * size[0] / SIZE[0])
+    image = Image.fromarray(fine).resize(size, Image.Resampling.BOX)
     _write(image, Path(path), scene)
 
 
@@ -135,6 +115,10 @@ def _write(image: Image.Image, path: Path, scene: Scene) -> None:
 
 def _main(arguments: Sequence[str]) -> None:
     """Draw the NetCDF of the first argument into the PNG of the second; the rest is JSON on standard input."""
+    import xarray as xr  # noqa: PLC0415 - see above
+
+    from planum.scene.build import build_scene  # noqa: PLC0415
+
     source, target = arguments
     request = json.loads(sys.stdin.read() or "{}")
     with xr.open_dataset(source, engine="h5netcdf", decode_times=False, chunks={"depth": 1}) as slices:

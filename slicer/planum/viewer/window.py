@@ -84,6 +84,7 @@ class Window:
         depth, level = control.scene.depth_m, control.scene.level
         self._sliders["depth"] = self._slider(control.to_depth, control.depths, depth, "depth of the slice, m", 0.045)
         self._sliders["level"] = self._slider(control.to_level, control.levels, level, "isosurface, amplitude", 0.315)
+        self.plotter.enable_terrain_style(mouse_wheel_zooms=True)  # depth stays downwards however the mouse turns
         self.plotter.reset_key_events()
         keys: dict[str, Callable[[], frozenset[Part]]] = {
             "Up": partial(control.step, -1),
