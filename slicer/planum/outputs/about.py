@@ -11,7 +11,7 @@ from html.parser import HTMLParser
 from pathlib import Path
 from typing import Any
 
-import h5netcdf
+import h5py
 import numpy as np
 import rasterio
 from PIL import Image
@@ -24,7 +24,9 @@ from planum.outputs.writing import PNG_KEY, joined
 __all__ = ["READABLE", "statement_in"]
 
 _LARGEST = 200_000_000
-"""Bytes of JSON, HTML or picture read at most."""
+"""Bytes of JSON or HTML read at most."""
+_ROWS = 10_000
+"""Slices read at most from a GeoPackage."""
 
 
 def statement_in(path: Path) -> dict[str, str]:
@@ -75,7 +77,7 @@ def _untagged(tags: dict[str, Any]) -> dict[str, str]:
 
 
 def _netcdf(path: Path) -> dict[str, str]:
-    with h5netcdf.File(path, "r") as file:
+    with h5py.File(path, "r") as file:  # the root's attributes only: links to other files are not followed
         attrs = dict(file.attrs)
     return {k.removeprefix(STATEMENT_PREFIX): _plain(v) for k, v in attrs.items() if k.startswith(STATEMENT_PREFIX)}
 
@@ -93,14 +95,13 @@ def _geopackage(path: Path) -> dict[str, str]:
         base.row_factory = sqlite3.Row
         if not base.execute("SELECT 1 FROM sqlite_master WHERE name = ?", (STATEMENT_TABLE,)).fetchone():
             return {}
-        rows = base.execute(f"SELECT * FROM {STATEMENT_TABLE} ORDER BY rowid").fetchall()  # noqa: S608  # a constant
+        rows = base.execute(f"SELECT * FROM {STATEMENT_TABLE} ORDER BY rowid").fetchmany(_ROWS)  # noqa: S608  # a constant
     return joined([{k: _number(row[k]) for k in row.keys() if k not in {"fid", "sentence"}} for row in rows])  # noqa: SIM118
 
 
 def _png(path: Path) -> dict[str, str]:
     with Image.open(path, formats=["PNG"]) as picture:
-        picture.load()
-        text = getattr(picture, "text", {}).get(PNG_KEY, "")
+        text = picture.info.get(PNG_KEY, "")
     return _from_json(json.loads(text)) if text else {}
 
 
