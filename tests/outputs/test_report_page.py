@@ -153,14 +153,10 @@ document.getElementById("f").addEventListener("load", function () {{
 def measured(folder, name) -> tuple[int, int, float]:
     """Page width, elements beyond it and text size of a page shown 390 pixels wide, as Chromium lays it out."""
     (folder / "probe.html").write_text(PROBE.format(name=name), encoding="utf-8")
-    options = "--headless --no-sandbox --hide-scrollbars --disable-gpu --disable-background-networking"
-    done = subprocess.run(
-        [
-            "chromium", *options.split(), "--allow-file-access-from-files", f"--user-data-dir={folder / 'profile'}", "--virtual-time-budget=5000",
-            "--dump-dom", (folder / "probe.html").as_uri(),
-        ],
-        capture_output=True, text=True, timeout=120, check=True,
-    )  # fmt: skip
+    options = "--headless --no-sandbox --hide-scrollbars --disable-gpu --disable-background-networking --dump-dom"
+    command = ["chromium", *options.split(), "--allow-file-access-from-files", "--virtual-time-budget=5000"]
+    command += [f"--user-data-dir={folder / 'profile'}", (folder / "probe.html").as_uri()]
+    done = subprocess.run(command, capture_output=True, text=True, timeout=120, check=True)
     width, wide, font = re.search(r"width (\d+) wide (\d+) font ([\d.]+)px", done.stdout).groups()
     return int(width), int(wide), float(font)
 
