@@ -43,6 +43,7 @@ def test_texts_state_interval_error_level_and_caution(ring: xr.Dataset) -> None:
     assert "depths drawn 3 times taller" in scene.notes()
     assert any("under 1 m across left out" in note for note in scene.notes())
     assert "no clearance to dig" in scene.caution
+    assert scene.at_level(12345.6).level_text() == "nothing reaches amplitude 12 346"
     assert "nothing reaches" in scene.at_level(9.0).level_text()
     assert build_scene(ring.isel(depth=[3])).level_text() == "one slice: no isosurface"
 

@@ -81,8 +81,8 @@ class Scene:
         if self.block.depth.size < 2:
             return "one slice: no isosurface"
         if self.isosurface.n_cells == 0:
-            return f"nothing reaches amplitude {self.level:.3g}"
-        return f"isosurface at amplitude {self.level:.3g} ({self.level_origin})"
+            return f"nothing reaches amplitude {_plain(self.level)}"
+        return f"isosurface at amplitude {_plain(self.level)} ({self.level_origin})"
 
     def notes(self) -> tuple[str, ...]:
         """Return what must be known to read the picture: exaggeration, thinning."""
@@ -158,6 +158,11 @@ def build_scene(
         stretch=(low, high if high > low else low + 1.0),
         exaggeration=exaggeration,
     )
+
+
+def _plain(value: float) -> str:
+    """Three digits, or whole numbers in groups of three where they are large; never a power of ten for people."""
+    return f"{value:.3g}" if abs(value) < 1000 else f"{value:,.0f}".replace(",", " ")
 
 
 def _speck(block: Block) -> float:

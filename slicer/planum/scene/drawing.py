@@ -141,7 +141,7 @@ def aim(
     *,
     bearing_deg: float = 208.0,
     height_deg: float = 36.0,
-    window: tuple[float, float, float, float] = (0.04, 0.96, 0.13, 0.86),
+    window: tuple[float, float, float, float] = (0.04, 0.96, 0.12, 0.83),
 ) -> None:
     """Point the camera from the south-west and above, so that frame and labels fill ``window``.
 

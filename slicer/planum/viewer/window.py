@@ -35,7 +35,7 @@ from planum.viewer.control import HELP, Controller, Part
 __all__ = ["SIZE", "Window", "open_window"]
 
 SIZE = (1500, 1000)
-_FREE = (0.05, 0.96, 0.22, 0.86)
+_FREE = (0.05, 0.96, 0.20, 0.83)
 _EVERYTHING: frozenset[Part] = frozenset({"slice", "isosurface", "lines", "text"})
 
 
@@ -172,7 +172,7 @@ class Window:
             style="modern",
             color=INK,
             title_height=0.017,
-            fmt="%.2f",
+            fmt="%.4g",
             interaction_event="end",
         )
         slider.KeyPressActivationOff()  # VTK's key i would hide the slider
