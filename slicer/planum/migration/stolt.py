@@ -19,14 +19,13 @@ from __future__ import annotations
 
 import math
 import threading
-from collections.abc import Hashable
 from dataclasses import dataclass
 from functools import lru_cache
 from typing import Any
 
 import numpy as np
 import xarray as xr
-from scipy import fft, sparse
+from scipy import fft, sparse, special
 
 from planum.constants import VELOCITY_RANGE
 from planum.errors import Problem, RecipeError
@@ -159,7 +158,7 @@ def stolt(
     -----
     Line by line means in two dimensions: what lies beside a line is imaged at its slant distance.
     """
-    _check(velocity_m_per_ns, max_dip_deg, dip_taper_deg, edge_taper_m)
+    _check(velocity_m_per_ns, max_dip_deg, dip_taper_deg, edge_taper_m, highest_ghz)
     along, time = cube["along"].values, cube["time"].values
     step = regular_step(along, name="along")
     shape = (along.size, time.size, step, regular_step(time, name="time"), float(time[0]))
@@ -320,7 +319,7 @@ def _beta(oversampling: float) -> float:
 
 
 def _kernel(offset: np.ndarray, beta: float) -> np.ndarray:
-    return np.i0(beta * np.sqrt(np.maximum(1.0 - (2.0 * offset / TAPS) ** 2, 0.0)))
+    return special.i0(beta * np.sqrt(np.maximum(1.0 - (2.0 * offset / TAPS) ** 2, 0.0)))
 
 
 def _kernel_transform(place: np.ndarray, beta: float) -> np.ndarray:
@@ -378,13 +377,14 @@ def _migrate_block(
     return out
 
 
-def _check(velocity: float, max_dip: float, dip_taper: float, edge_taper: float) -> None:
+def _check(velocity: float, max_dip: float, dip_taper: float, edge_taper: float, highest: float | None) -> None:
     low, high = VELOCITY_RANGE
-    checks: dict[Hashable, tuple[bool, float, str]] = {
+    checks: dict[str, tuple[bool, float | None, str]] = {
         "velocity_m_per_ns": (low <= velocity <= high, velocity, f"{low} to {high} m/ns"),
         "max_dip_deg": (0 < max_dip < 90, max_dip, "above 0 and below 90"),
         "dip_taper_deg": (dip_taper >= 0 and max_dip + dip_taper <= 90, dip_taper, "0 to 90 less max_dip_deg"),
         "edge_taper_m": (0 <= edge_taper < math.inf, edge_taper, "0 or more"),
+        "highest_ghz": (highest is None or 0 < highest < math.inf, highest, "above 0"),
     }
     problems = [
         Problem(came=f"{name} = {came!r}", allowed=f"allowed: {allowed}", key=f"recipe.migrate.{name}")
