@@ -7,9 +7,11 @@ for a page of help.
 from __future__ import annotations
 
 import importlib
+import os
 import sys
 import traceback
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
+from contextlib import contextmanager, suppress
 from typing import Any, NoReturn
 
 import click
@@ -97,6 +99,16 @@ class House(click.Group):
             for caution in CAUTIONS:
                 formatter.write_text(caution)
 
+    def make_context(self, *args: Any, **named: Any) -> click.Context:
+        """Parse what was typed; help that nobody reads to its end is no error."""
+        with _enough():
+            return super().make_context(*args, **named)
+
+    def invoke(self, ctx: click.Context) -> Any:
+        """Run the command; output that nobody reads to its end is no error."""
+        with _enough():
+            return super().invoke(ctx)
+
     def main(self, args: Sequence[str] | None = None, prog_name: str | None = None, **extra: Any) -> NoReturn:  # type: ignore[override]
         """Run, and end the program with one of the fixed exit codes; never with a traceback nobody asked for."""
         extra.pop("standalone_mode", None)
@@ -104,10 +116,6 @@ class House(click.Group):
         try:
             with talk.warnings():
                 code = super().main(args, prog_name or "planum", standalone_mode=False, obj=talk, **extra)
-        except SystemExit as stop:
-            if not isinstance(stop.__context__, BrokenPipeError):
-                raise
-            code = codes.DONE  # the reader of our output has seen enough
         except click.Abort as stop:
             code = _stopped(talk, stop)
         except KeyboardInterrupt as stop:
@@ -118,6 +126,17 @@ class House(click.Group):
         except Exception as error:
             code = _failed(talk, error)
         sys.exit(code or codes.DONE)
+
+
+@contextmanager
+def _enough() -> Iterator[None]:
+    """End quietly, as done, when the reader of standard output has seen enough (`planum recipe SITE | head`)."""
+    try:
+        yield
+    except BrokenPipeError:
+        with suppress(OSError, ValueError):  # what is still buffered would complain when the program ends
+            os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        raise click.exceptions.Exit(codes.DONE) from None
 
 
 def _stopped(talk: Talk, stop: BaseException) -> int:

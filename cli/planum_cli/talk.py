@@ -30,6 +30,8 @@ BAR = 24
 """Characters of the live bar."""
 REDRAW_S = 0.1
 """A live bar is redrawn at most ten times a second."""
+LINE_S = 2.0
+"""Lines of one stage come at most every two seconds, but for its first and its last."""
 
 
 def aligned(pairs: Iterable[tuple[str, object]], *, indent: int = 0) -> str:
@@ -88,11 +90,11 @@ class Progress:
 
     def _line(self, done: int, total: int, seconds: float) -> None:
         quarter = min(4 * done // total, 4) if total > 0 else 0
-        if quarter <= self._quarter:
-            return
         first = self._quarter < 0
-        self._quarter = quarter
-        if first and quarter == 0:
+        if quarter <= self._quarter or (not first and quarter < 4 and seconds - self._drawn < LINE_S):
+            return
+        self._quarter, self._drawn = quarter, seconds
+        if first and quarter < 4:
             _to_stderr(f"{printable(self._stage)} ..." + (f" ({total})" if total > 0 else ""))
         else:
             _to_stderr(f"{printable(self._stage)} {25 * quarter} % ({done} of {total}, {_clock(seconds)})")
@@ -150,18 +152,17 @@ class Talk:
     def warnings(self) -> Iterator[None]:
         """Show this library's warnings as sentences, once each, and others only with ``--debug``."""
         with warnings.catch_warnings():
-            warnings.simplefilter("default" if self.debug else "ignore")
+            warnings.simplefilter("default")
             warnings.simplefilter("always", PlanumWarning)
-            usual = warnings.showwarning
 
-            def show(message: Warning | str, category: type[Warning], *rest: Any, **named: Any) -> None:
+            def show(message: Warning | str, category: type[Warning], filename: str, lineno: int, *_: Any) -> None:
                 if isinstance(message, PlanumWarning):
                     self.tell(message.problem)
                 elif issubclass(category, PlanumWarning):
                     self.tell(Problem(str(message), severity="warning"))
                 elif self.debug:
                     self._clear()
-                    usual(message, category, *rest, **named)
+                    _to_stderr(warnings.formatwarning(message, category, filename, lineno).rstrip())
 
             warnings.showwarning = show
             yield

@@ -9,6 +9,9 @@ import click
 from planum_cli import options
 from planum_cli.talk import Talk, aligned
 
+MOST = 4
+"""Values of single slices that are written out."""
+
 
 @click.command(
     "about",
@@ -26,6 +29,12 @@ def command(talk: Talk, file: Path) -> int:
     from planum.outputs.about import statement_in
 
     said = statement_in(file)
-    talk.result(aligned((name.replace("_", " "), value) for name, value in said.items()))
+    talk.result(aligned((name.replace("_", " "), _short(value)) for name, value in said.items()))
     talk.next("planum recipe SITE   prints the steps behind it")
     return 0
+
+
+def _short(value: str) -> str:
+    """Return the values of many slices as their first, their last and how many there are."""
+    parts = value.split(" | ")
+    return value if len(parts) <= MOST else f"{parts[0]} ... {parts[-1]} ({len(parts)} slices)"

@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import click
 
+from planum.errors import LineError, Problem
 from planum_cli import options
 from planum_cli.running import quoted
 from planum_cli.talk import Talk, aligned
@@ -19,7 +21,7 @@ if TYPE_CHECKING:
     "look",
     cls=options.PlainCommand,
     examples=(
-        "planum look lines/A_01.sgy              what the file says, and A_01.png beside where you are",
+        "planum look lines/A_01.sgy              what the file says, and A_01-look.png in this folder",
         "planum look lines/A_01.sgy --unit ps --frequency 400",
     ),
 )
@@ -28,7 +30,7 @@ if TYPE_CHECKING:
     "--picture",
     metavar="PNG",
     type=click.Path(dir_okay=False, path_type=Path),
-    help="The picture to write; the file's name with .png, where you are, if not given.",
+    help="The picture to write; NAME-look.png in the current folder if not given.",
 )
 @click.option(
     "--interval-ns",
@@ -50,12 +52,15 @@ def command(talk: Talk, file: Path, picture: Path | None, interval_ns: float | N
 
     if interval_ns is not None and rest["unit"] is not None:
         raise click.UsageError("--interval-ns and --unit both say how long a sample is; give one of them")
-    target = Path(f"{file.stem}.png") if picture is None else picture
+    target = Path(f"{file.stem}-look.png") if picture is None else picture
     _refuse_overwriting(target, file)
     frequency = None if rest["frequency"] is None else rest["frequency"] / 1e3
-    recording = read_line(
-        file, ReadOptions(interval_ns=interval_ns, interval_unit=rest["unit"], centre_frequency_ghz=frequency)
-    )
+    try:
+        recording = read_line(
+            file, ReadOptions(interval_ns=interval_ns, interval_unit=rest["unit"], centre_frequency_ghz=frequency)
+        )
+    except LineError as error:
+        raise LineError([_said_here(p) for p in error.problems]) from error
     for problem in recording.problems:
         talk.tell(problem)
     draw_look(target, recording, title=file.name, centre_frequency_ghz=frequency)
@@ -64,11 +69,22 @@ def command(talk: Talk, file: Path, picture: Path | None, interval_ns: float | N
     return 0
 
 
+_TOLD = ("n_samples", "n_traces_found")
+"""Header facts that stand in the lines above them."""
+
+
 def _refuse_overwriting(target: Path, file: Path) -> None:
     if target.suffix.lower() != ".png":
         raise click.BadParameter(f"{quoted(target)}: a picture's name ends in .png", param_hint="--picture")
     if target.exists() and target.samefile(file):
         raise click.BadParameter("the picture would overwrite the line file", param_hint="--picture")
+
+
+def _said_here(problem: Problem) -> Problem:
+    """Return a problem whose cure is an option of this command, not a key of a survey."""
+    if problem.key in ("interval_unit", "sample_interval_ns"):
+        return replace(problem, do="look again with --unit ps, ns or us, or with --interval-ns")
+    return problem
 
 
 def _facts(recording: Recording) -> list[tuple[str, object]]:
@@ -86,6 +102,6 @@ def _facts(recording: Recording) -> list[tuple[str, object]]:
             facts += [
                 ("text" if not i else "", row) for i, row in enumerate(r for r in rows if r.strip(" C0123456789"))
             ]
-        elif value not in ("", None):
+        elif value not in ("", None, 0) and key not in _TOLD:
             facts.append((key.replace("_", " "), value))
     return facts

@@ -16,9 +16,9 @@ from planum_cli.talk import Talk
     "map",
     cls=options.PlainCommand,
     examples=(
-        "planum map marrowby                     slices of the survey folder marrowby, in marrowby/out",
-        "planum map marrowby --name deep         a second run beside the first, in marrowby/out-deep",
-        "planum map marrowby --plan out/run.json the same numbers again, from a run's own record",
+        "planum map marrowby                        slices of the survey in marrowby, in marrowby/out",
+        "planum map marrowby --name deep            a second run beside the first, in marrowby/out-deep",
+        "planum map marrowby --plan kept/run.json   the same numbers again, from a run's own record",
     ),
 )
 @options.site
@@ -68,6 +68,6 @@ def _only_a_run(out: Path) -> None:
     """Refuse a folder that holds something else: the run takes the place of the whole folder."""
     if out.is_dir() and any(out.iterdir()) and not (out / "run.json").is_file():
         raise click.BadParameter(
-            f"{quoted(out)} holds something that is no run, and a run takes the place of the whole folder; name a new one",
+            f"{quoted(out)} holds something that is no run, and a run takes the place of its whole folder",
             param_hint="--out",
         )

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import statistics
 from collections import Counter
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
@@ -23,8 +24,10 @@ __all__ = ["Found", "FoundLine", "line_files", "look_through"]
 Progress = Callable[[str, int, int], None]
 Point = tuple[float, float]
 
-NOMINAL_MHZ = (25, 50, 80, 100, 150, 200, 250, 300, 350, 400, 500, 600, 700, 800, 900, 1000, 1200, 1500, 2000, 2500)
-"""Round centre frequencies among which the measured one is rounded."""
+NOMINAL_MHZ = (25, 50, 100, 200, 250, 300, 400, 500, 600, 800, 900, 1000, 1200, 1500, 2000, 2500)
+"""Round centre frequencies of antennas (common practice)."""
+LOWERED = 0.9
+"""Strongest over nominal frequency: the ground takes more from the high frequencies (common practice, roughly)."""
 _SPECTRA = 5
 _FAR_M = 10_000.0
 """Coordinates beyond this are map coordinates; the drafted local frame then starts near the first line."""
@@ -86,15 +89,15 @@ class Found:
 
     @property
     def n_traces(self) -> int:
-        """Median number of traces of a line."""
-        return int(np.median([line.n_traces for line in self.lines]))
+        """Median number of traces of a line; of two middle ones the larger, so that it is some line's own."""
+        return statistics.median_high(line.n_traces for line in self.lines)
 
     @property
     def nominal_mhz(self) -> float:
-        """The usual centre frequency nearest to the strongest one, sampled at least four times a period."""
+        """The usual centre frequency that fits the strongest one, sampled at least four times a period."""
         most = 1e3 / (SAMPLES_PER_PERIOD_LEAST * self.interval_ns)
         fit: list[float] = [f for f in NOMINAL_MHZ if f <= most] or [max(10.0, math.floor(most))]
-        return float(min(fit, key=lambda f: abs(math.log(f / max(self.strongest_mhz, 1.0)))))
+        return float(min(fit, key=lambda f: abs(math.log(LOWERED * f / max(self.strongest_mhz, 1.0)))))
 
     @property
     def several_per_file(self) -> bool:
