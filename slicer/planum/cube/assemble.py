@@ -3,7 +3,7 @@
 Positions follow the register: the first and the last trace of a piece lie ON its start and end, in walking order, with
 equal spacing between. ``along_scale`` stretches a piece about its start, ``along_shift_m`` moves it towards growing
 coordinates, ``reverse`` exchanges start and end. ``dropped`` traces (first, last, both counted, file numbering) keep
-their place in the count but are no recording.
+their place in the count but count as dead.
 """
 
 from __future__ import annotations

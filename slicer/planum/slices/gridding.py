@@ -126,7 +126,7 @@ class LineGridder:
         self._average = kernels.averages(self.present, width=width) if width > 1.0 + _HAIR else None
 
     def weights(self, x_local: np.ndarray, y_local: np.ndarray) -> CellWeights:
-        """Return the weights of cells at local places (1-D, m). Memory is about 1 kB a cell while they are built."""
+        """Return the weights of cells at local places (1-D, m). Memory: some 4 kB a cell while they are built."""
         g = self.geometry
         x, y = np.asarray(x_local, float).ravel(), np.asarray(y_local, float).ravel()
         along, across = (x, y) if g.direction == "x" else (y, x)
@@ -177,19 +177,20 @@ class LineGridder:
         out = np.full(strip.shape, np.nan, np.float32)
         n = self.geometry.n_lines
         taps = np.arange(-7, 8, 2)
-        d = np.broadcast_to(taps / 2.0, (self.geometry.n_along, taps.size))
-        weights, window = kernels.line_kernel(d)
+        bits = 1 << np.arange(taps.size)
         for r in range(1, n - 1):
-            rows = r + taps
-            inside = (rows >= 0) & (rows < n)
-            held = np.clip(rows, 0, n - 1)
-            there = self.present[held].T & inside
+            held = np.clip(r + taps, 0, n - 1)
+            there = self.present[held] & (held == r + taps)[:, None]
             ok = self.present[r] & self.present[r - 1] & self.present[r + 1]
-            w = kernels.with_taps(weights, window, d, there)
-            values = np.where(there, strip[held].T, 0.0)
+            # Few patterns of missing neighbours occur along a line, mostly one.
+            codes, which = np.unique(bits @ there, return_inverse=True)
+            d = np.broadcast_to(taps / 2.0, (codes.size, taps.size))
+            w = kernels.with_taps(*kernels.line_kernel(d), d, (codes[:, None] & bits) > 0).astype(np.float32)
+            values = np.where(there, strip[held], np.float32(0.0))
+            summed = w[0] @ values if codes.size == 1 else np.einsum("ta,at->a", values, w[which])
             low, high = np.minimum(strip[r - 1], strip[r + 1]), np.maximum(strip[r - 1], strip[r + 1])
-            margin = LIMIT_MARGIN * (high - low)
-            guess = np.maximum(np.clip((w * values).sum(axis=1), low - margin, high + margin), 0.0)
+            margin = np.float32(LIMIT_MARGIN) * (high - low)
+            guess = np.maximum(np.clip(summed, low - margin, high + margin), 0.0)
             out[r, ok] = np.abs(strip[r] - guess)[ok]
         return out
 
@@ -238,16 +239,19 @@ class LineGridder:
         d = taps - place[:, :, None]
         safe = np.clip(taps, 0, g.n_along - 1)
         there = self.present[held[:, :, None], safe] & (taps == safe)
-        full = weights[:, :, None] * kernels.with_taps(*kernels.along_kernel(d), d, there)
-        cells = np.broadcast_to(np.arange(v.size)[:, None, None], full.shape)
+        along_w = np.empty(d.shape)
+        # Mostly nothing is missing: then all rows share one set of weights.
+        plain = there.all(axis=(1, 2)) & (place == v[:, None]).all(axis=1)
+        for some, here in ((plain, slice(0, 1)), (~plain, slice(None))):
+            part = d[some][:, here]
+            along_w[some] = kernels.with_taps(*kernels.along_kernel(part), part, there[some][:, here])
+        full = weights[:, :, None] * along_w
         columns = held[:, :, None] * g.n_along + safe
-        some = full != 0.0
-        matrix = scipy.sparse.coo_matrix(
-            (full[some], (cells[some], columns[some])), shape=(v.size, g.n_lines * g.n_along)
-        ).tocsr()
+        size = (v.size, -1)
+        matrix = kernels.from_rows(full.reshape(size), columns.reshape(size), g.n_lines * g.n_along)
         if self._average is not None:
             matrix = matrix @ self._average
-        return matrix.astype(np.float32)
+        return matrix
 
 
 def _steps_to_present(present: np.ndarray) -> np.ndarray:

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import scipy.sparse
 
-__all__ = ["ALONG_TAPS", "LINE_TAPS", "along_kernel", "averages", "line_kernel", "with_taps"]
+__all__ = ["ALONG_TAPS", "LINE_TAPS", "along_kernel", "averages", "from_rows", "line_kernel", "with_taps"]
 
 LINE_TAPS = np.arange(-3, 5)
 """Rows read for a cell, from the row below it: 8 taps."""
@@ -86,17 +86,24 @@ def averages(present: np.ndarray, *, width: float) -> scipy.sparse.csr_matrix:
     )  # present places to the nearer end, itself counted
     half = np.minimum(width / 2.0, room - 0.5)
     reach = int(np.ceil(width / 2.0 - 0.5))
-    at = np.flatnonzero(present.ravel())
-    h = half.ravel()[at]
-    rows, columns, data = [], [], []
-    for k in range(-reach, reach + 1):
-        share = np.clip(np.minimum(h, abs(k) + 0.5) - np.maximum(-h, abs(k) - 0.5), 0.0, None) / (2.0 * h)
-        some = share > 1e-12
-        rows.append(at[some])
-        columns.append(at[some] + k)
-        data.append(share[some])
-    full = (np.concatenate(data), (np.concatenate(rows), np.concatenate(columns)))
-    return scipy.sparse.coo_matrix(full, shape=(size, size)).tocsr()
+    k = np.arange(-reach, reach + 1)
+    near, far = (np.abs(k) - 0.5).astype(np.float32), (np.abs(k) + 0.5).astype(np.float32)
+    h = np.where(present, half, 0.0).astype(np.float32).reshape(size, 1)
+    share = np.clip(np.minimum(h, far) - np.maximum(-h, near), 0.0, None) / np.maximum(2.0 * h, 1e-6)
+    columns = np.clip(np.arange(size)[:, None] + k, 0, size - 1)
+    return from_rows(share, columns, size)
+
+
+def from_rows(data: np.ndarray, columns: np.ndarray, width: int) -> scipy.sparse.csr_matrix:
+    """Return the (len(data), width) matrix with ``data`` (row, entry) at ``columns``; zeros are not kept."""
+    rows, entries = data.shape
+    kind = np.int32 if max(width, rows * entries) < 2**31 else np.int64
+    start = np.arange(rows + 1, dtype=kind) * kind(entries)
+    full = scipy.sparse.csr_matrix(
+        (data.astype(np.float32).ravel(), columns.astype(kind).ravel(), start), (rows, width)
+    )
+    full.eliminate_zeros()
+    return full
 
 
 def _run(present: np.ndarray) -> np.ndarray:
