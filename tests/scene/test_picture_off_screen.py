@@ -105,6 +105,7 @@ def test_a_slice_file_is_drawn_in_a_process_of_its_own(ring: xr.Dataset, tmp_pat
 def test_a_crash_of_the_drawing_process_becomes_a_problem(tmp_path: Path) -> None:
     """A missing library kills VTK with a signal; here the process kills itself the same way."""
     dies = [sys.executable, "-c", "import os, signal; os.kill(os.getpid(), signal.SIGSEGV)"]
+    (tmp_path / "slices.nc").touch()
     problem = render_safely(tmp_path / "slices.nc", tmp_path / "scene.png", command=dies)
     assert isinstance(problem, Problem)
     assert "SIGSEGV" in str(problem)
@@ -119,6 +120,7 @@ def test_a_missing_slice_file_becomes_a_problem_that_names_it(tmp_path: Path) ->
 
 
 def test_a_silent_process_without_a_picture_becomes_a_problem(tmp_path: Path) -> None:
+    (tmp_path / "a.nc").touch()
     problem = render_safely(tmp_path / "a.nc", tmp_path / "scene.png", command=[sys.executable, "-c", ""])
     assert problem is not None
     assert "without a picture" in problem.came

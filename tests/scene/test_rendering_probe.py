@@ -67,7 +67,7 @@ def test_a_machine_that_draws_has_no_problem() -> None:
     "use",
     [
         "from planum.scene.probe import rendering_problem; rendering_problem(command=['/nowhere'])",
-        "from planum.scene.picture import render_safely; render_safely('a.nc', 'b.png', command=['/nowhere'])",
+        "from planum.scene.picture import render_safely; render_safely(sys.executable, 'b.png', command=['/nowhere'])",
     ],
 )
 def test_asking_does_not_load_the_drawing_library(use: str) -> None:

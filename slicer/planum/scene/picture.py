@@ -83,6 +83,8 @@ def render_safely(
     Problem or None
         What kept the picture from being made.
     """
+    if not Path(slices_path).is_file():
+        return Problem(came="there is no slice file to draw", file=str(slices_path), do="planum map SITE makes it")
     request = {
         "size": list(size),
         "lines": [[name, np.asarray(places, float).tolist()] for name, places in lines],
