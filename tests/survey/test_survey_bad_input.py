@@ -295,11 +295,17 @@ def test_a_mistake_in_an_optional_control_column_is_told(
         ("channels.csv", "antenna arrays"),
         ("marks/1.csv", "distance marks"),
         ("tracks/1.csv", "tracks"),
+        ("Obstacles.GeoJSON", "obstacles"),
     ],
 )
 def test_a_file_that_would_be_ignored_is_refused_by_name(folder: Write, name: str, words: str) -> None:
     site = folder(files=("lines/A_1.sgy", "lines/A_2.sgy", "lines/A_10.sgy", name))
     _told(site, name.partition("/")[0], "", "", f"not supported yet: {words}.*; move it out of the survey folder")
+
+
+def test_control_in_other_letters_is_not_ignored(folder: Write) -> None:
+    site = folder(files=("lines/A_1.sgy", "Control.CSV"))
+    _told(site, "Control.CSV", "", "", "Control.CSV is not read; the name is control.csv; rename it")
 
 
 def test_the_same_folders_may_stand_empty(folder: Write) -> None:

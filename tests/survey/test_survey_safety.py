@@ -203,6 +203,16 @@ def test_messages_carry_no_control_characters(folder: Write, toml: str, lines: s
     assert len(text.split("\n")) == len(caught.value.problems)
 
 
+def test_words_for_people_lose_their_control_characters(folder: Write, toml: str, control: str) -> None:
+    text = "grid,line,file,start_x_m,start_y_m,end_x_m,end_y_m,note\nA,1,lines/A_1.sgy,0,0,20,0,a\x1b[31mb\n"
+    survey = read_survey(
+        folder(toml=toml.replace("Marrowby", "M\\u001b[2J\\u202e"), lines=text, control=control.replace("P1", "P\x071"))
+    )
+    assert survey.config.survey.title == "M [2J  Field"
+    assert survey.rows[0].note == "a [31mb"
+    assert survey.control[0].point == "P 1"
+
+
 @pytest.mark.parametrize("name", ["NUL", "con", "COM1", "lpt9.txt", "AUX.tar.gz", "prn ", "COM²", "CONIN$"])
 def test_device_names_are_known(name: str) -> None:
     """The reserved names of Windows (Microsoft, Naming Files, Paths, and Namespaces; from memory)."""

@@ -16,7 +16,7 @@ from pydantic import AfterValidator, BaseModel, BeforeValidator, ConfigDict, Fie
 from pydantic_core import PydanticCustomError
 
 from planum.constants import VELOCITY_RANGE
-from planum.errors import nearest
+from planum.errors import nearest, printable
 from planum.survey.frames import check_crs
 from planum.survey.safety import is_device, posix
 
@@ -95,6 +95,12 @@ def _visit_name(value: object) -> object:
     return value.isoformat() if type(value) is dt.date else value
 
 
+def _seen(value: str) -> str:
+    return printable(value, longest=1000)
+
+
+Text = Annotated[str, AfterValidator(_seen)]
+"""Words for people: control characters are blanks from here on."""
 Name = Annotated[str, AfterValidator(_name)]
 OptionalName = Annotated[str, AfterValidator(lambda v: _name(v) if v else v)]
 VisitName = Annotated[str, BeforeValidator(_visit_name)]
@@ -134,7 +140,7 @@ def _number(values: Mapping[str, Any], key: str) -> float | None:
 class SurveyTable(Table):
     """``[survey]``: what the survey is called and where its coordinates live."""
 
-    title: str = Field(min_length=1, max_length=200, description="what the survey is called in reports")
+    title: Text = Field(min_length=1, max_length=200, description="what the survey is called in reports")
     code: Annotated[str, AfterValidator(_code)] = Field(description="a short code, used in file names")
     crs: Annotated[str, AfterValidator(check_crs)] | None = Field(
         None, description="the projected coordinate reference system of control.csv, such as EPSG:25832"
@@ -177,7 +183,7 @@ class Visit(Table):
 
     name: OptionalName = Field("", description="optional: the date is used")
     date: Annotated[dt.date, BeforeValidator(_date)] = Field(description="the day, such as 2026-04-18")
-    conditions: str = Field("", max_length=1000, description="weather before, ground, vegetation")
+    conditions: Text = Field("", max_length=1000, description="weather before, ground, vegetation")
 
 
 class RawTable(Table):

@@ -6,7 +6,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
-from planum.errors import Problem, SurveyError
+from planum.errors import Problem, SurveyError, printable
 from planum.survey.names import Names
 from planum.survey.table import Row, read_sheet
 
@@ -75,7 +75,7 @@ def _point(row: Row, names: Names) -> ControlPoint:
         row.sheet.complain(row, "accuracy_m", f"accuracy_m is {accuracy:g}", "a positive number of metres")
     grid = names.grid(row) if row.text("grid") else None
     return ControlPoint(
-        point=row.needed("point"),
+        point=printable(row.needed("point"), longest=60),
         local_x_m=x or 0.0,
         local_y_m=y or 0.0,
         easting_m=east or 0.0,

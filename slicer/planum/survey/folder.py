@@ -140,16 +140,25 @@ def _survey_text(folder: Path, roots: Sequence[Path]) -> str:
 
 
 def _unsupported(folder: Path) -> Iterator[Problem]:
-    """Complain about files of the contract that would be ignored."""
-    for name, what in NOT_YET.items():
-        path = folder / name
+    """Complain about files that would be silently ignored: not supported yet, or known in other letters."""
+    try:
+        paths = sorted(folder.iterdir())
+    except OSError as error:
+        yield Problem(f"the folder {folder.name!r} cannot be listed ({error.strerror})")
+        return
+    for path in paths:
+        name = path.name.casefold()
+        if name == "control.csv" != path.name:
+            yield Problem(f"{path.name} is not read", "the name is control.csv", "rename it", file=path.name)
+        if name not in NOT_YET:
+            continue
         try:
             empty = path.is_dir() and not any(path.iterdir())
         except OSError:
             empty = False
-        if _there(path) and not empty:
+        if not empty:
             do = "move it out of the survey folder to go on without it"
-            yield Problem(f"not supported yet: {what} ({name})", "", do, file=name)
+            yield Problem(f"not supported yet: {NOT_YET[name]} ({path.name})", "", do, file=path.name)
 
 
 def _registers(folder: Path, config: SurveyConfig | None, text: str, roots: Sequence[Path]) -> Register:

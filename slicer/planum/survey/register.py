@@ -11,7 +11,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 
-from planum.errors import Problem, Severity, SurveyError
+from planum.errors import Problem, Severity, SurveyError, printable
 from planum.survey.config import SurveyConfig, name_or_complaint
 from planum.survey.names import Names
 from planum.survey.safety import inside, is_file, posix
@@ -166,7 +166,7 @@ def _entry(row: Row, names: Names) -> RegisterRow | None:
         last_trace=last,
         radar=radar,
         visit=visit,
-        note=row.text("note"),
+        note=printable(row.text("note"), longest=1000),
         superseded_by=row.text("superseded_by"),
         source=row.source,
         part=part,
