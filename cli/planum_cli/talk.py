@@ -164,7 +164,7 @@ class Talk:
                     self._clear()
                     _to_stderr(warnings.formatwarning(message, category, filename, lineno).rstrip())
 
-            warnings.showwarning = show
+            warnings.showwarning = show  # type: ignore[assignment]  # it is called by position
             yield
 
     def _clear(self) -> None:

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import tomllib
 from pathlib import Path
+from typing import NamedTuple
 
 import click
 import numpy as np
@@ -11,11 +13,25 @@ import xarray as xr
 from click.testing import CliRunner, Result
 from PIL import Image
 
-from planum.errors import MachineError, Problem, RecipeError
+from planum.errors import MachineError, Problem
 from planum.lines.segy_write import write_segy
 from planum.pipeline.run import RunResult
+from planum.records import StepSpec
 from planum_cli.commands import demo
 from planum_cli.main import cli
+
+
+class SetOf(NamedTuple):
+    """What of a set's plan the recipe needs."""
+
+    name: str
+    chain: tuple[StepSpec, ...]
+
+
+class PlanOf(NamedTuple):
+    """What of a plan the recipe needs."""
+
+    sets: tuple[SetOf, ...]
 
 
 def run(*args: object, **named: object) -> Result:
@@ -203,22 +219,38 @@ def test_look_refuses_two_ways_to_say_one_thing(stick: Path) -> None:
     assert run("look", stick / "L1.sgy", "--unit", "ps", "--interval-ns", "1").exit_code == 2
 
 
-def test_recipe_prints_toml_on_standard_output_only(site: Path, monkeypatch: pytest.MonkeyPatch) -> None:
-    """What can be pasted is not mixed with what is said beside it."""
-    monkeypatch.setattr("planum.pipeline.recipe.resolved_toml", lambda _: '[recipe]\nsteps = ["envelope"]\n')
+def test_recipe_prints_toml_on_standard_output_only(site: Path) -> None:
+    """What is printed is TOML with the six steps in their order; what is said beside it goes elsewhere."""
     done = run("recipe", site)
-    assert done.stdout == '[recipe]\nsteps = ["envelope"]\n'
+    assert done.exit_code == 0, done.stderr
+    recipe = tomllib.loads(done.stdout)["recipe"]
+    assert recipe["steps"] == ["dewow", "gain", "bandpass", "background", "migrate", "envelope"]
+    assert recipe["migrate"]["velocity_m_per_ns"] > 0
     assert "next: " in done.stderr
 
 
-def test_recipe_passes_the_librarys_refusal_on(site: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+def test_recipe_of_unlike_sets_prints_one_and_the_others_as_comments(
+    site: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Two sets with two settings: still TOML, and both are to be read."""
+    sets = tuple(
+        SetOf(name, (StepSpec(name="dewow", version=1, params={"window_ns": ns}),))
+        for name, ns in (("A/x", 4.0), ("B/x", 5.0))
+    )
+    monkeypatch.setattr("planum.pipeline.outlook.plan_site", lambda *_, **__: PlanOf(sets))
+    done = run("recipe", site)
+    assert tomllib.loads(done.stdout)["recipe"]["dewow"] == {"window_ns": 4.0}
+    assert "# window_ns = 5" in done.stdout
+    assert "set B/x" in done.stdout
+
+
+def test_recipe_passes_the_librarys_refusal_on(site: Path) -> None:
     """A recipe that cannot run is the survey's matter."""
-
-    def refuse(_: Path) -> str:
-        raise RecipeError(Problem("there is no step 'x'"))
-
-    monkeypatch.setattr("planum.pipeline.recipe.resolved_toml", refuse)
-    assert run("recipe", site).exit_code == 3
+    text = (site / "survey.toml").read_text()
+    (site / "survey.toml").write_text(text + '\nsteps = ["dewow"]\n')
+    done = run("recipe", site)
+    assert done.exit_code == 3
+    assert "the recipe ends with voltage" in done.stderr
 
 
 def test_view_without_a_run_names_the_command_that_makes_one(site: Path) -> None:
@@ -336,7 +368,7 @@ def test_the_demo_is_copied_mapped_and_on_a_second_call_left_as_it_is(
     monkeypatch.setattr("planum.pipeline.run.map_site", fake)
     first = run("demo")
     assert first.exit_code == 0, first.stderr
-    copied = {p.relative_to(tmp_path / "marrowby-demo").as_posix() for p in Path("marrowby-demo").rglob("*")}
+    copied = {p.relative_to("marrowby-demo").as_posix() for p in Path("marrowby-demo").rglob("*")}
     assert copied == {"survey.toml", "lines.csv", "README.md", "lines", *(f"lines/L{i}.sgy" for i in (1, 2, 3))}
     for said in ("report.html", "slices.nc", "planum view marrowby-demo", "out/slices"):
         assert said in first.stderr

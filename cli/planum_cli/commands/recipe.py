@@ -20,15 +20,18 @@ from planum_cli.talk import Talk
     ),
 )
 @options.site
+@options.root
 @options.manner
 @click.pass_obj
-def command(talk: Talk, site: Path) -> int:
+def command(talk: Talk, site: Path, roots: tuple[Path, ...]) -> int:
     """Print the processing steps of SITE as TOML, with every setting the survey leaves open filled in.
 
     The numbers are learned from the lines themselves. Any of them can be pasted into survey.toml and changed there.
     """
-    from planum.pipeline.recipe import resolved_toml
+    from planum.pipeline.outlook import resolved_toml
 
-    talk.result(resolved_toml(site).rstrip("\n"))
+    with talk.progress() as progress:
+        text = resolved_toml(site, roots=roots, progress=progress)
+    talk.result(text.rstrip("\n"))
     talk.next(f"planum map {quoted(site)}   runs these steps")
     return 0

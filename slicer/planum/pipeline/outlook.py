@@ -13,14 +13,14 @@ from planum.cube.geometry import line_spacing
 from planum.errors import LineError, Problem, SurveyError
 from planum.lines.reading import read_line
 from planum.pipeline import resolve
-from planum.pipeline.recipe import settings
-from planum.pipeline.run import sources_of
+from planum.pipeline.recipe import settings, toml
+from planum.pipeline.run import plan_site, sources_of
 from planum.records import LineEntry
 from planum.survey.folder import Survey, read_survey
 from planum.survey.places import direction
 from planum.survey.register import RegisterRow
 
-__all__ = ["Outlook", "SetOutlook", "outlook"]
+__all__ = ["Outlook", "SetOutlook", "outlook", "resolved_toml"]
 
 Progress = Callable[[str, int, int], None]
 
@@ -119,6 +119,26 @@ def outlook(site: Path, *, roots: Sequence[Path] = (), progress: Progress | None
         set_aside=(*survey.set_aside, *aside),
         warnings=(*survey.warnings, *warnings),
     )
+
+
+def resolved_toml(site: Path, *, roots: Sequence[Path] = (), progress: Progress | None = None) -> str:
+    """Return the recipe of a survey with every automatic setting filled in, as TOML.
+
+    Where the sets of a survey learn different numbers, the first set's are the text and the others' are comments.
+
+    Raises
+    ------
+    SurveyError, RecipeError, FrameError
+        As a map of the survey would.
+    """
+    first, *others = plan_site(Path(site), roots=roots, progress=progress).sets
+    text = toml(first.chain)
+    unlike = [(one.name, toml(one.chain)) for one in others if toml(one.chain) != text]
+    if unlike:
+        text = f"# set {first.name}\n{text}"
+    for name, other in unlike:
+        text += f"\n# set {name}\n" + "".join(f"# {row}".rstrip() + "\n" for row in other.splitlines())
+    return text
 
 
 def _read_all(survey: Survey, progress: Progress | None) -> tuple[list[_Read], list[Problem], list[Problem]]:
