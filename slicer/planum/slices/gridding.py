@@ -30,7 +30,7 @@ class CellWeights:
     coverage : (cell,) uint8
         0 not surveyed, 1 measured (within half a cell of a recorded row), 2 filled between lines or just outside them.
     limited : int
-        Cells whose value had to be limited, summed over all slices applied so far.
+        Cells whose value had to be limited in the strip applied last.
     """
 
     coverage: np.ndarray
@@ -56,8 +56,7 @@ class CellWeights:
         (cell,) float32
             NaN where masked.
         """
-        values, count = self.apply_counted(strip, limit=limit)
-        self.limited += count
+        values, self.limited = self.apply_counted(strip, limit=limit)
         return values
 
     def apply_counted(self, strip: np.ndarray, *, limit: bool = True) -> tuple[np.ndarray, int]:
