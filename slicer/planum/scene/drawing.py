@@ -55,7 +55,7 @@ def greys() -> np.ndarray:
 def draw_plane(plotter: pv.Plotter, scene: Scene, *, scale: float = 1.0) -> Any:
     """Draw the slice; unknown cells are left out, not painted."""
     known = np.flatnonzero(np.isfinite(scene.plane.cell_data["amplitude"]))
-    mesh = scene.plane.extract_cells(known).extract_surface(algorithm=None)
+    mesh = scene.plane.extract_cells(known)
     table = pv.LookupTable(values=greys().astype(np.uint8), scalar_range=scene.stretch)
     grow = 0.001 * scene.width_m  # a rim in the very edge of the slice would flicker
     west, south, east, north = (scene.block.box[i] + by for i, by in ((0, -grow), (2, -grow), (1, grow), (3, grow)))
