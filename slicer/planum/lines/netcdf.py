@@ -1,7 +1,8 @@
 """NetCDF with CF conventions: a numeric variable with the dimensions trace and sample (or time).
 
 NetCDF-4 files are HDF5: external storage, external links and virtual datasets would read other files of the machine
-and are refused. Classic files (CDF-1, CDF-2) are read from memory, bounded by the file's length.
+and are refused. The HDF5 library itself may loop on a file whose inner heap is damaged; nothing here can stop that
+from within the process. Classic files (CDF-1, CDF-2) are read from memory, bounded by the file's length.
 """
 
 from __future__ import annotations

@@ -22,16 +22,16 @@ SAMPLE_TYPES = {
 }
 """Names people type for numpy's sample types."""
 
+# sign and power of sixteen for each first byte; powers of two, so that products with 24-bit fractions are exact
+_SCALE = np.ldexp(np.repeat([1.0, -1.0], 128), 4 * (np.arange(256) % 128 - 64) - 24)
+
 _LEAST_WRAPPED = 64  # fewer samples than one short trace tell nothing about where they are centred
 
 
 def from_ibm(words: np.ndarray) -> np.ndarray:
     """Return float64 values of hexadecimal floats given as uint32 words, any shape; exact."""
     words = np.asarray(words, np.uint32)
-    fraction = (words & np.uint32(0x00FFFFFF)).astype(np.float64)
-    exponent = ((words >> np.uint32(24)) & np.uint32(0x7F)).astype(np.int32)
-    values = np.ldexp(fraction, 4 * (exponent - 64) - 24)
-    return np.where(words >> np.uint32(31), -values, values)
+    return _SCALE[words >> np.uint32(24)] * (words & np.uint32(0x00FFFFFF))
 
 
 def to_ibm(values: np.ndarray) -> np.ndarray:
