@@ -97,7 +97,7 @@ def _scatterers(xy: np.ndarray, z: np.ndarray, q: np.ndarray) -> Scatterers:
 
 
 def _smooth_field(xy: np.ndarray, reach_m: float, rng: np.random.Generator, waves: int = 24) -> np.ndarray:
-    """Return a smooth random field of unit variance at places (n, 2): a sum of plane waves no shorter than ``reach_m``."""
+    """Return a smooth field of unit variance at places (n, 2): random plane waves no shorter than ``reach_m``."""
     k = 2.0 * np.pi / (reach_m * rng.uniform(1.0, 4.0, waves))
     turn, phase = rng.uniform(0.0, 2.0 * np.pi, (2, waves))
     total = np.zeros(len(xy))
