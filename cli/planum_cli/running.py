@@ -14,6 +14,9 @@ if TYPE_CHECKING:
 
 __all__ = ["count", "quoted", "tell_run"]
 
+LABELS = {"limit_depth_m": ("noise begins at", "m"), "notes": ("mind", "")}
+"""Words and units for entries of a run's summary whose name alone would not tell."""
+
 
 def count(number: int, word: str) -> str:
     """Return a number with its word, singular or plural."""
@@ -49,15 +52,15 @@ def tell_run(talk: Talk, result: RunResult, *, site: Path, name: str | None = No
 
 
 def _pairs(summary: dict[str, Any]) -> list[tuple[str, str]]:
-    """Return the summary as label and text, without what is empty."""
-    return [
-        (key.replace("_", " "), _text(value)) for key, value in summary.items() if value not in (None, "", [], (), {})
-    ]
+    """Return the summary as label and text, several texts below each other, without what is empty."""
+    pairs = []
+    for key, value in summary.items():
+        label, unit = LABELS.get(key, (key.replace("_", " "), ""))
+        texts = [_text(v, unit) for v in (value if isinstance(value, list | tuple) else [value]) if v not in (None, "")]
+        pairs += [(label if not i else "", text) for i, text in enumerate(texts)]
+    return pairs
 
 
-def _text(value: object) -> str:
-    if isinstance(value, list | tuple):
-        return "; ".join(_text(v) for v in value)
-    if isinstance(value, dict):
-        return "; ".join(f"{k} {_text(v)}" for k, v in value.items())
-    return f"{value:.4g}" if isinstance(value, float) else str(value)
+def _text(value: object, unit: str) -> str:
+    text = f"{value:.4g}" if isinstance(value, float) else str(value)
+    return f"{text} {unit}".rstrip()
