@@ -153,6 +153,15 @@ def test_check_knows_the_steps(site: Path) -> None:
     assert "did you mean 'envelope'?" in done.stderr
 
 
+def test_check_asks_for_the_control_points_a_crs_needs(site: Path) -> None:
+    """A map frame without points to tie it to would stop the map at night; the evening says so."""
+    text = (site / "survey.toml").read_text()
+    (site / "survey.toml").write_text(text.replace("[survey]", '[survey]\ncrs = "EPSG:25832"', 1))
+    done = run("check", site)
+    assert done.exit_code == 3
+    assert "add control.csv" in done.stderr
+
+
 def test_check_reads_every_line_and_names_what_would_be_set_aside(site: Path) -> None:
     """A missing file and a damaged one: code 1, and the rest is counted."""
     (site / "lines" / "L1.sgy").unlink()

@@ -7,6 +7,7 @@ import shutil
 from pathlib import Path
 
 import pytest
+
 from planum.errors import MachineError, SurveyError
 from planum.pipeline.store import Store
 from planum.pipeline.tidy import tidy
