@@ -55,7 +55,7 @@ def scanned(true_cube):
 @pytest.mark.parametrize(("v", "seeds"), [(0.07, (10, 11, 12)), (0.085, (20, 21, 22)), (0.13, (30, 31, 32))])
 def test_velocity_is_found(v, seeds):
     estimate, _ = focus_scan([cube(v, seeds=seeds)])
-    # one step is 2 %, the parabola finds a tenth of it; over 70 other models the worst was within 0.5 %
+    # over 70 other models of this kind: median error 0.26 %, 90 % within 0.43 %, worst 0.78 %
     assert estimate.value == pytest.approx(v, rel=0.01)
     assert abs(estimate.value - v) < 2.0 * estimate.error
 
@@ -121,6 +121,17 @@ def test_gaps_and_missing_rows_do_not_vote(true_cube, scanned):
     estimate, _ = focus_scan([holed])
     assert "4 lines" in estimate.evidence
     assert estimate.value == pytest.approx(scanned[0].value, rel=0.005)
+
+
+def test_long_strong_tails_do_not_outvote_the_foci():
+    """Strong hyperbolas without spreading, on close traces: most patches see only a tail sweeping through."""
+    along, time = 0.025 * np.arange(400), -2.0 + 0.2 * np.arange(250)
+    rng = np.random.default_rng(50)
+    data = 0.2 * rng.normal(size=(1, along.size, time.size))
+    for x, z in ((2.1, 0.5), (3.3, 1.2), (5.0, 0.8), (6.4, 1.4), (8.2, 1.0)):
+        data[0] += 5.0 * ricker(time - 2.0 / 0.13 * np.hypot(along - x, z)[:, None])
+    estimate, _ = focus_scan([schema.cube(data.astype(np.float32), line=np.zeros(1), along=along, time=time)])
+    assert estimate.value == pytest.approx(0.13, rel=0.01)
 
 
 @pytest.mark.parametrize("planes", [0, 3])
