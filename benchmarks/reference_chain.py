@@ -129,6 +129,10 @@ def gain(g: Grid) -> tuple[float, float]:
     below = np.flatnonzero(use & (envelope < 2.0 * noise))
     stop = t[below[0]] if below.size else t[-1]
     use &= t <= stop
+    if use.sum() < 8:  # nothing to fit: spreading alone
+        stop = t[-1]
+        g.data = g.data * np.clip(t, 0.5, stop)
+        return 0.0, stop
     slope = np.polyfit(t[use], np.log(envelope[use] * t[use]), 1)[0]
     b = max(-slope, 0.0)
     held = np.clip(t, 0.5, stop)
@@ -156,18 +160,20 @@ def migrate(g: Grid, velocity: float) -> None:
     first = round(-g.start_ns / g.step_ns)
     n_image = n - first
     n_x, n_t = 1 << int(np.ceil(np.log2(1.6 * n_along))), 2 * n_image
-    spectrum = np.fft.rfft(g.data[:, :, first:], n=n_t, axis=2)
     omega = 2 * np.pi * np.fft.rfftfreq(n_t, g.step_ns)
     use = (omega > 2 * np.pi * 0.05) & (omega < 2 * np.pi * 1.1)
-    spectrum = np.fft.fft(spectrum[:, :, use], n=n_x, axis=1)
     kx = 2 * np.pi * np.fft.fftfreq(n_x, g.along[1] - g.along[0])
-    square = omega[use][None, :] ** 2 - (0.5 * velocity * kx[:, None]) ** 2
-    spectrum *= square > 0
+    square = omega[use][:, None] ** 2 - (0.5 * velocity * kx[None, :]) ** 2
     turn = np.exp(1j * np.sqrt(np.maximum(square, 0.0)) * g.step_ns)
     image = np.empty((n_lines, n_along, n_image))
-    for k in range(n_image):
-        image[:, :, k] = 2.0 / n_t * np.fft.ifft(spectrum.sum(axis=2), axis=1).real[:, :n_along]
-        spectrum *= turn
+    for i in range(n_lines):
+        spectrum = np.fft.rfft(g.data[i, :, first:], n=n_t, axis=1)[:, use].T
+        spectrum = np.fft.fft(spectrum, n=n_x, axis=1) * (square > 0)
+        levels = np.empty((n_image, n_x), complex)
+        for k in range(n_image):
+            levels[k] = spectrum.sum(axis=0)
+            spectrum *= turn
+        image[i] = 2.0 / n_t * np.fft.ifft(levels, axis=1).real[:, :n_along].T
     g.data, g.start_ns = image, 0.0
 
 
@@ -201,17 +207,17 @@ def between_lines(strips: np.ndarray, g: Grid, cell: float) -> tuple[np.ndarray,
         for s in range(strips.shape[2]):
             along[i, s] = np.interp(a, g.along[good], strips[i, good, s]) if good.any() else 0.0
     out = np.full((strips.shape[2], c.size, a.size), np.nan)
-    for m, place in enumerate(c):
-        for q in range(a.size):
-            rows = np.flatnonzero(near[:, q])
-            away = np.abs(g.across[rows] - place)
-            if rows.size == 0 or away.min() > 0.6 * spacing:
-                continue
-            upper = min(int(np.searchsorted(g.across[rows], place)), rows.size - 1)
-            lower = max(upper - 1, 0)
-            gap = g.across[rows[upper]] - g.across[rows[lower]]
-            share = (place - g.across[rows[lower]]) / gap if gap > 0 else 0.0
-            out[:, m, q] = (1 - share) * along[rows[lower], :, q] + share * along[rows[upper], :, q]
+    for q in range(a.size):
+        rows = np.flatnonzero(near[:, q])
+        if rows.size < 2:
+            continue
+        upper = np.clip(np.searchsorted(g.across[rows], c), 1, rows.size - 1)
+        low, high = rows[upper - 1], rows[upper]
+        share = np.clip((c - g.across[low]) / (g.across[high] - g.across[low]), 0.0, 1.0)
+        away = np.minimum(np.abs(c - g.across[low]), np.abs(c - g.across[high]))
+        values = (1 - share)[:, None] * along[low, :, q] + share[:, None] * along[high, :, q]
+        values[away > 0.6 * spacing] = np.nan
+        out[:, :, q] = values.T
     return out, a, c
 
 

@@ -10,9 +10,9 @@ The site is invented: no such field was surveyed.
 from __future__ import annotations
 
 import argparse
-import importlib.util
 import json
 import math
+import runpy
 from collections.abc import Collection
 from pathlib import Path
 
@@ -118,18 +118,17 @@ def make(folder: Path, *, only: Collection[int] | None = None) -> Written:
 
 def measure(folder: Path) -> tuple[float, float]:
     """Contrast of the walls in their top slice (dB), AUC of the mean from their top to their base."""
-    spec = importlib.util.spec_from_file_location("reference_chain", HERE.parents[1] / "benchmarks/reference_chain.py")
-    if spec is None or spec.loader is None:
+    path = HERE.parents[1] / "benchmarks" / "reference_chain.py"
+    if not path.is_file():
         raise SystemExit("benchmarks/reference_chain.py is not there: measuring needs the whole repository")
-    chain = importlib.util.module_from_spec(spec)
-    spec.loader.exec_module(chain)
+    chain = runpy.run_path(str(path))
     walls = building()
     body = (min(w.top_m for w in walls), max(w.base_m for w in walls))
     truth = json.loads((folder / "truth" / "features.geojson").read_text())
-    stack, x, y = chain.depth_slices(
+    stack, x, y = chain["depth_slices"](
         folder, velocity=scene().ground.velocity_m_per_ns, intervals=np.array([TOP_SLICE_M, body])
     )
-    contrast, auc = chain.judge(stack, x, y, truth)
+    contrast, auc = chain["judge"](stack, x, y, truth)
     return float(contrast[0]), float(auc[1])
 
 
