@@ -14,7 +14,7 @@ if TYPE_CHECKING:
 
 __all__ = ["count", "quoted", "tell_run"]
 
-LABELS = {"limit_depth_m": ("noise begins at", "m"), "notes": ("mind", "")}
+LABELS = {"limit_depth_m": ("ground meets noise at", "m"), "notes": ("mind", "")}
 """Words and units for entries of a run's summary whose name alone would not tell."""
 
 

@@ -67,6 +67,24 @@ def test_spacing_survives_missing_lines_and_pieces():
     assert geometry.line_spacing([*lines(across), *pieces], direction="x") == 0.25
 
 
+@pytest.mark.parametrize("across", [[0.0, 0.5, 1.0, 2.0, 4.5], [0.0, 1.0, 1.5], [0.0, 1.0, 2.5, 4.0]])
+def test_spacing_with_most_lines_missing(across):
+    """All places are multiples of half a metre: no two lines may fall into one row, whatever is missing."""
+    step = geometry.line_spacing(lines(across), direction="x")
+    assert step == pytest.approx(0.5)
+    g = geometry.cube_geometry(lines(across), **TIME)
+    assert len({e.row for e in geometry.place_rows(lines(across), g)[0]}) == len(across)
+
+
+def test_two_lines_in_one_row_are_refused_and_pieces_are_not():
+    twice = [*lines([0.0, 0.5, 1.0]), entry("9", (0.0, 0.52), (10.0, 0.52))]
+    g = geometry.cube_geometry(lines([0.0, 0.5, 1.0]), **TIME)
+    with pytest.raises(SurveyError, match=r"both lie on the row at 0\.50 m; one line in a row"):
+        geometry.place_rows(twice, g)
+    pieces = [*lines([0.0, 1.0]), entry("1", (0.0, 0.5), (4.0, 0.5)), entry("1b", (6.0, 0.5), (10.0, 0.5))]
+    assert len(geometry.place_rows(pieces, g)[0]) == 4
+
+
 def test_spacing_of_a_third_of_a_metre_survives_centimetre_tapes():
     """Positions rounded to 1 cm: the median step alone (0.33) would drift four rows over 400 lines."""
     typed = np.round(np.arange(400) / 3.0, 2)

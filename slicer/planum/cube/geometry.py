@@ -92,20 +92,30 @@ def set_direction(entries: Sequence[LineEntry]) -> Direction:
 def line_spacing(entries: Sequence[LineEntry], *, direction: Direction) -> float:
     """Return the nominal line spacing in m.
 
-    The median difference of neighbouring positions across the lines (so that a missing line does not matter), refined
-    by a straight fit of position against row, because tapes read to the centimetre cannot hold a third of a metre.
-    A single line returns :data:`ALONE_M`.
+    The widest step of which all distances between neighbouring lines are whole multiples within a tenth (so that any
+    number of missing lines does not matter), refined by a straight fit of position against row, because tapes read to
+    the centimetre cannot hold a third of a metre. Lines on no common step get the median distance. A single line
+    returns :data:`ALONE_M`.
     """
-    named: dict[tuple[str, str], list[float]] = {}
-    for e in entries:  # the pieces of one line count once
-        named.setdefault((e.grid, e.line), []).append(_across(e, direction))
-    across = _distinct([float(np.mean(pieces)) for pieces in named.values()])
+    across = _distinct([_across(e, direction) for e in entries])
     if across.size < 2:
         return ALONE_M
-    steps = np.diff(across)
-    rows = np.concatenate([[0.0], np.cumsum(np.round(steps / np.median(steps)))])
+    gaps = np.diff(across)
+    step = next((c for n in (1, 2, 3) for c in [_smallest(gaps) / n] if _fits(gaps, c)), float(np.median(gaps)))
+    rows = np.concatenate([[0.0], np.cumsum(np.maximum(np.round(gaps / step), 1.0))])
     slope = float(np.polyfit(rows - rows.mean(), across - across.mean(), 1)[0])
     return round(slope, 6)  # a micrometre: keeps typed spacings as typed
+
+
+def _smallest(gaps: np.ndarray) -> float:
+    """Mean of the gaps within a tenth of the smallest: one line a little off its place does not set the spacing."""
+    return float(gaps[gaps <= 1.2 * gaps.min()].mean())
+
+
+def _fits(gaps: np.ndarray, step: float) -> bool:
+    """Whether every gap is a whole multiple of ``step`` within a tenth of it, one line in ten excepted."""
+    rows = gaps / step
+    return bool(np.mean(np.abs(rows - np.round(rows)) <= 2 * _OFF_ROW) >= 0.9 and rows.min() > 0.5)
 
 
 def trace_spacing(entries: Sequence[LineEntry]) -> float:
@@ -207,7 +217,7 @@ def place_rows(
     Raises
     ------
     SurveyError
-        When a line lies outside the geometry's rows.
+        When a line lies outside the geometry's rows, or two lines cover the same stretch of one row.
     """
     placed, problems, outside = [], [], []
     for e in entries:
@@ -237,9 +247,33 @@ def place_rows(
                 )
             )
         placed.append(e if e.row == row else e.model_copy(update={"row": row}))
+    outside += _doubled(placed, geometry)
     if outside:
         raise SurveyError(outside)
     return tuple(placed), tuple(problems)
+
+
+def _doubled(entries: Sequence[LineEntry], geometry: CubeGeometry) -> list[Problem]:
+    """Name lines that share a stretch of one row; pieces of one line may."""
+    problems = []
+    last: dict[int, tuple[float, str]] = {}
+    spans = [sorted((_along(e.start, geometry.direction), _along(e.end, geometry.direction))) for e in entries]
+    for (low, high), e in sorted(zip(spans, entries, strict=True), key=lambda pair: pair[0][0]):
+        reached, name = last.get(e.row, (-math.inf, e.line))
+        if name != e.line and low < reached - geometry.along_step_m:
+            problems.append(
+                Problem(
+                    f"lines {name} and {e.line} of grid {e.grid} both lie on the row at"
+                    f" {geometry.line0_m + e.row * geometry.line_step_m:.2f} m",
+                    allowed=f"one line in a row (spacing {geometry.line_step_m:g} m)",
+                    do="correct a start or end, or name the better line in superseded_by",
+                    file=e.file,
+                    line=e.line,
+                )
+            )
+        if high > reached:
+            last[e.row] = (high, e.line)
+    return problems
 
 
 def _along(point: Sequence[float], direction: Direction) -> float:

@@ -17,7 +17,7 @@ from pathlib import Path
 
 from planum.errors import MachineError, Problem
 
-__all__ = ["finish", "publish"]
+__all__ = ["MARK", "aside", "check_place", "finish", "publish"]
 
 _LINUX_EXCHANGE, _AT_CWD = 2, -100
 _DARWIN_SWAP = 2
@@ -47,6 +47,26 @@ def publish(new: Path, final: Path) -> None:
                 file=str(final),
             )
         ) from fault
+
+
+def check_place(final: Path) -> None:
+    """Refuse to replace a folder that is no run folder: it would be deleted.
+
+    Raises
+    ------
+    MachineError
+        When ``final`` is a file, or a folder with something in it but no ``run.json``.
+    """
+    ours = final.is_dir() and ((final / "run.json").is_file() or not any(final.iterdir()))
+    if final.exists() and not ours:
+        raise MachineError(
+            Problem(
+                came="something else than a run stands here, and a run would replace it",
+                allowed="a new folder, an empty one, or one with a run.json",
+                do="choose another --out or --name",
+                file=str(final),
+            )
+        )
 
 
 def finish(final: Path) -> None:

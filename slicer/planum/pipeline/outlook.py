@@ -101,7 +101,7 @@ def outlook(site: Path, *, roots: Sequence[Path] = (), progress: Progress | None
     """
     survey = read_survey(Path(site), roots=roots)
     chosen = settings({"steps": survey.config.recipe.names(), **survey.config.recipe.settings()})
-    resolve._frames(survey)  # raises where control points do not fit
+    resolve.site_frames(survey)  # raises where control points do not fit
     read, aside, warnings = _read_all(survey, progress)
     if not read:
         raise SurveyError([Problem("no line can be used", do="mend what is wrong with each"), *aside])

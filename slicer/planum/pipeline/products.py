@@ -5,6 +5,7 @@ from __future__ import annotations
 import json
 import shutil
 from collections.abc import Callable, Mapping, Sequence
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import replace
 from pathlib import Path
 from typing import Any
@@ -134,28 +135,31 @@ def write_products(
     def step(stage: str) -> Callable[[int, int], None]:
         return lambda done, total: progress(stage, done, total) if progress else None
 
-    write_slices(folder / "slices", stack, told, stretch, progress=step("writing rasters"))
-    write_stack(folder / "slices_all.tif", stack, told)
-    write_netcdf(folder / "slices.nc", stack, told, history=f"planum {plan.version}, plan {key(plan)}")
-    changed = max((s.visit for s in plan.sets if s.visit), default="1970-01-01")
     pictures = folder / "pictures"
     linked = _copy_sections(pictures, plan, sections)
-    write_geopackage(folder / "site.gpkg", shapes(run, stack, linked), told, changed=changed)
-    drawn = draw_slices(pictures, stack, told, stretch, progress=step("drawing slices"))
+    site = shapes(run, stack, linked)
+    write_netcdf(
+        folder / "slices.nc", stack, told, history=f"planum {plan.version}, plan {key(plan)}", attrs={"code": plan.code}
+    )
     named = {"contact": pictures / "contact-sheet.png"}
-    draw_contact_sheet(named["contact"], stack, told, stretch)
-    if run.curve:
-        named["focus"] = pictures / "velocity-focus.png"
-        draw_focus(named["focus"], run.curve, plan.sets[0].velocity)
-    if progress:
-        progress("drawing the isosurface", 0, 1)
-    problem = draw_scene(folder / "slices.nc", pictures / "isosurface.png", shapes(run, stack, linked))
+    with ThreadPoolExecutor(1) as beside:  # the scene is drawn in a process of its own while the rest is written
+        scene = beside.submit(draw_scene, folder / "slices.nc", pictures / "isosurface.png", site)
+        write_slices(folder / "slices", stack, told, stretch, progress=step("writing rasters"))
+        write_stack(folder / "slices_all.tif", stack, told)
+        changed = max((s.visit for s in plan.sets if s.visit), default="1970-01-01")
+        write_geopackage(folder / "site.gpkg", site, told, changed=changed)
+        drawn = draw_slices(pictures, stack, told, stretch, progress=step("drawing slices"))
+        draw_contact_sheet(named["contact"], stack, told, stretch)
+        if run.curve:
+            named["focus"] = pictures / "velocity-focus.png"
+            draw_focus(named["focus"], run.curve, plan.sets[0].velocity)
+        step("drawing the isosurface")(0, 1)
+        problem = scene.result()
+        step("drawing the isosurface")(1, 1)
     if problem is None:
         named["isosurface"] = pictures / "isosurface.png"
     else:
         run = replace(run, warnings=(*run.warnings, replace(problem, severity="warning")))
-    if progress:
-        progress("drawing the isosurface", 1, 1)
     shown = Drawn(named, drawn, best_slices(_levels(stack)), {label: name for (label, _), name in linked.items()})
     context = report_context(run, told, shown, folder)
     write_report(folder / "report.html", context)

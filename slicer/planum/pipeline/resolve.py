@@ -34,7 +34,7 @@ from planum.slices.intervals import intervals
 from planum.survey.config import Radar
 from planum.survey.folder import Survey
 
-__all__ = ["Resolution", "resolve"]
+__all__ = ["Resolution", "resolve", "site_frames"]
 
 MOST_CELLS = 400_000_000
 """Cells of one slice: beyond it grids are not one site, or a coordinate is mistyped."""
@@ -86,7 +86,7 @@ def resolve(
         When the survey cannot be mapped as it stands; every problem found is in it.
     """
     chosen = settings({"steps": survey.config.recipe.names(), **survey.config.recipe.settings()})
-    frames = _frames(survey)
+    frames = site_frames(survey)
     warnings: list[Problem] = []
     drafts = [_draft(name, group, survey, frames, warnings) for name, group in _sets(lines).items()]
     velocity, curve = _velocity(survey, drafts, chosen, store, executor, warnings, progress)
@@ -134,8 +134,14 @@ def _sets(lines: Sequence[Line]) -> dict[str, list[Line]]:
     }
 
 
-def _frames(survey: Survey) -> dict[str, Similarity]:
-    """Fit every grid to its own control points, or to the site grid's."""
+def site_frames(survey: Survey) -> dict[str, Similarity]:
+    """Fit every grid to its own control points, or to the site grid's.
+
+    Raises
+    ------
+    FrameError
+        When points are missing or do not fit.
+    """
     out = {}
     for grid in survey.config.grid:
         own = [c for c in survey.control if c.grid.casefold() == grid.name.casefold()]

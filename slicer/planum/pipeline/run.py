@@ -84,6 +84,7 @@ def map_site(
     final = Path(out) if out is not None else site / (f"out-{name}" if name else "out")
     survey = read_survey(site, roots=roots)
     exchange.finish(final)
+    exchange.check_place(final)
     store = Store(site / "work")
     with ThreadPoolExecutor(workers or os.cpu_count() or 1) as executor:
         try:

@@ -1,0 +1,348 @@
+"""The main job from outside: a folder in, a run folder out; again, cut short, with damage, on any number of threads."""
+
+from __future__ import annotations
+
+import json
+import os
+import random
+import shutil
+import subprocess
+import sys
+import time
+from pathlib import Path
+
+import numpy as np
+import pytest
+import rasterio
+import xarray as xr
+
+from planum.errors import Problem, RecipeError, SurveyError
+from planum.pipeline import census, passes
+from planum.pipeline.cubes import open_cube
+from planum.pipeline.run import RunResult, map_site, plan_site, read_run
+from planum.synthetic.folder import write_survey
+from planum.synthetic.ready import one_page
+
+
+def copied(page: Path, tmp_path: Path) -> Path:
+    """Return a fresh copy of the one-page survey."""
+    site = tmp_path / "site"
+    shutil.copytree(page, site)
+    return site
+
+
+def rasters(out: Path) -> dict[str, bytes]:
+    """Return every GeoTIFF of a run by name."""
+    return {p.name: p.read_bytes() for p in sorted(out.rglob("*.tif"))}
+
+
+def is_whole(out: Path) -> bool:
+    """Tell, without the program, whether a run folder holds every file its record lists, at its size, all rasters open."""
+    record = json.loads((out / "run.json").read_text(encoding="utf-8"))
+    for name, size in record["files"].items():
+        if (out / name).stat().st_size != size:
+            return False
+    for path in out.rglob("*.tif"):
+        with rasterio.open(path) as raster:
+            raster.read(1)
+    listed = {*record["files"], "run.json"}
+    return {str(p.relative_to(out).as_posix()) for p in out.rglob("*") if p.is_file()} == listed
+
+
+def test_run_folder_holds_what_is_promised(mapped: RunResult) -> None:
+    """Every product of the contract is there, and nothing is half."""
+    out = mapped.out
+    for name in ("slices.nc", "slices_all.tif", "site.gpkg", "run.json", "report.html", "pictures/contact-sheet.png"):
+        assert (out / name).is_file(), name
+    assert len(list((out / "slices").glob("TEST_d???-???cm.tif"))) == 12
+    assert len(list((out / "pictures" / "sections").glob("*.png"))) == 17
+    assert (out / "pictures" / "isosurface.png").is_file()
+    assert is_whole(out)
+    assert mapped.changed
+    assert mapped.set_aside == ()
+    assert not list(out.parent.glob(".out*"))
+
+
+def test_velocity_is_found_from_the_data(mapped: RunResult) -> None:
+    """The synthetic ground has 0.0875 m/ns; the scan's own 1-sigma error is 1 to 2 %, three of them are allowed."""
+    plan, record = read_run(mapped.out / "run.json")
+    v = plan.sets[0].velocity
+    assert v.origin == "measured"
+    assert abs(v.value - 0.0875) < 3 * v.error
+    assert v.error < 0.03 * v.value
+    assert record["velocity_curve"]["votes"]
+
+
+def test_wall_is_seen_at_its_place_and_depth(mapped: RunResult) -> None:
+    """The wall (top 0.45 m, from (2.2, -0.5) to (3.6, 4.5)) is strong in its slice, the ground above it weak."""
+    with xr.open_dataset(mapped.out / "slices.nc", engine="h5netcdf") as data:
+        centre = 2.2 + (data.y + 0.5) * 1.4 / 5.0
+        distance = abs(data.x - centre) * np.cos(np.arctan(1.4 / 5.0))
+        amplitude = data.amplitude.load()
+        inside = amplitude.where(distance < 0.25).mean(("y", "x"))
+        outside = amplitude.where(distance > 1.0).mean(("y", "x"))
+        ratio = 20 * np.log10(inside / outside)
+        top = int(np.argmin(abs(data.depth.values - 0.45)))
+        assert float(ratio[top]) > 8.0  # dB, the least contrast the demo promises
+        assert float(inside[1]) < 0.1 * float(inside[top])  # 0.1 to 0.2 m: only the pulse's side lobes, 20 dB down
+        assert int(np.argmax(inside.values)) in (top, top + 1)
+
+
+def test_second_run_recomputes_nothing(
+    page: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch, no_isosurface: None
+) -> None:
+    """Unchanged input: no raw file is read, nothing is written; a new title writes products but reads no line."""
+    site = copied(page, tmp_path)
+    first = map_site(site)
+    stamp = (first.out / "run.json").stat().st_mtime_ns
+
+    def refuse(*_: object, **__: object) -> None:
+        raise AssertionError("a raw file was read again")
+
+    monkeypatch.setattr(census, "read_line", refuse)
+    monkeypatch.setattr(passes, "run_row", refuse)
+    real_open = Path.open
+    monkeypatch.setattr(Path, "open", lambda p, *a, **k: refuse() if p.suffix == ".sgy" else real_open(p, *a, **k))
+    again = map_site(site)
+    assert not again.changed
+    assert (first.out / "run.json").stat().st_mtime_ns == stamp
+    text = (site / "survey.toml").read_text(encoding="utf-8")
+    (site / "survey.toml").write_text(text.replace("Invented survey", "Another title"), encoding="utf-8")
+    retitled = map_site(site)
+    assert retitled.changed
+    assert "Another title" in (site / "out" / "report.html").read_text(encoding="utf-8")
+
+
+def test_rasters_do_not_depend_on_threads_or_the_day(page: Path, tmp_path: Path, no_isosurface: None) -> None:
+    """One thread and three, two folders, two moments: byte-identical GeoTIFFs."""
+    a, b = copied(page, tmp_path / "a"), copied(page, tmp_path / "b")
+    one = map_site(a, workers=1)
+    time.sleep(1.1)  # a time stamp of whole seconds would differ
+    three = map_site(b, workers=3)
+    first, second = rasters(one.out), rasters(three.out)
+    assert first.keys() == second.keys()
+    assert all(first[name] == second[name] for name in first)
+    assert (one.out / "slices.nc").read_bytes() == (three.out / "slices.nc").read_bytes()
+
+
+def test_plan_can_be_repeated(page: Path, tmp_path: Path, no_isosurface: None) -> None:
+    """A run made from another run's plan gives the same rasters, though the survey now says another velocity."""
+    site = copied(page, tmp_path)
+    first = map_site(site)
+    with (site / "survey.toml").open("a", encoding="utf-8") as file:
+        file.write("\n[ground]\nvelocity_m_per_ns = 0.12\n")
+    changed = map_site(site, name="other")
+    repeated = map_site(site, name="again", plan=first.out / "run.json")
+    assert rasters(repeated.out) == rasters(first.out)
+    assert rasters(changed.out) != rasters(first.out)
+    assert {p.name for p in site.glob("out*")} == {"out", "out-other", "out-again"}
+
+
+def test_one_changed_line_redoes_one_line(
+    page: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch, no_isosurface: None
+) -> None:
+    """With velocity and recipe settled, new bytes in one file that change no estimate cost one row."""
+    site = copied(page, tmp_path)
+    with (site / "survey.toml").open("a", encoding="utf-8") as file:
+        file.write("\n[ground]\nvelocity_m_per_ns = 0.0875\n")
+    map_site(site)
+    path = sorted((site / "lines").glob("*.sgy"))[3]
+    raw = bytearray(path.read_bytes())
+    raw[10] ^= 1  # a letter of the textual header: other bytes, the same traces
+    path.write_bytes(raw)
+    rows = []
+    real = passes.run_row
+    monkeypatch.setattr(
+        passes, "run_row", lambda pieces, plan, row, **k: rows.append(row) or real(pieces, plan, row, **k)
+    )
+    assert map_site(site).changed
+    assert rows == [3]
+
+
+def test_unreadable_line_is_set_aside(page: Path, tmp_path: Path, no_isosurface: None) -> None:
+    """Garbage in one file and another file missing: both are named, the rest is mapped, their stripes stay empty."""
+    site = copied(page, tmp_path)
+    files = sorted((site / "lines").glob("*.sgy"))
+    files[8].write_bytes(b"not a line" * 1000)
+    files[12].unlink()
+    result = map_site(site)
+    text = " ".join(str(p) for p in result.set_aside)
+    assert files[8].name in text
+    assert files[12].name in text
+    assert len(result.set_aside) == 2
+    report = (result.out / "report.html").read_text(encoding="utf-8")
+    assert files[8].name in report
+    with xr.open_dataset(result.out / "slices.nc", engine="h5netcdf") as data:
+        middle = data.amplitude.sel(x=3.0, method="nearest").isel(depth=5)
+        # line 9 lies at y = 2.0: a cell there is a whole spacing from the next trace, beyond 0.6 of it
+        assert np.isnan(float(middle.sel(y=2.0, method="nearest")))
+        assert np.isfinite(float(middle.sel(y=1.75, method="nearest")))
+        assert int((data.coverage.sel(y=2.0, method="nearest") == 0).all())
+
+
+def test_no_usable_line_is_an_error(page: Path, tmp_path: Path) -> None:
+    """Nothing to map: the error names every file."""
+    site = copied(page, tmp_path)
+    for path in (site / "lines").glob("*.sgy"):
+        path.write_bytes(b"\0" * 5000)
+    with pytest.raises(SurveyError, match="no line can be used") as caught:
+        map_site(site)
+    assert len(caught.value.problems) == 18
+
+
+def test_rendering_that_fails_costs_one_picture(page: Path, tmp_path: Path, no_isosurface: None) -> None:
+    """A machine that cannot draw in 3-D finishes everything else and says so."""
+    result = map_site(copied(page, tmp_path))
+    assert not (result.out / "pictures" / "isosurface.png").exists()
+    assert any("cannot draw" in str(w) for w in result.warnings)
+    assert "this machine cannot draw" in (result.out / "report.html").read_text(encoding="utf-8")
+    assert is_whole(result.out)
+
+
+@pytest.mark.parametrize(
+    ("recipe", "message"),
+    [
+        ('steps = ["envelope", "migrate"]', r"'migrate' cannot follow 'envelope': it takes voltage, and gets envelope"),
+        ('steps = ["dewow", "migrate"]', r"the recipe ends with voltage"),
+        ('steps = ["dewow", "dewow", "envelope"]', r"'dewow' comes twice"),
+        ('steps = ["dewov", "envelope"]', r"there is no step 'dewov'; did you mean 'dewow'\?"),
+        ("[recipe.migrate]\nmax_dip = 40", r"unknown setting 'max_dip'.*max_dip_deg"),
+        ("[recipe.dewow]\nwindow_ns = 'wide'", r"recipe\.dewow\.window_ns"),
+    ],
+)
+def test_impossible_recipe_is_refused_before_any_work(
+    page: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch, recipe: str, message: str
+) -> None:
+    """The order and every setting are checked before a second look at the data."""
+    site = copied(page, tmp_path)
+    text = (site / "survey.toml").read_text(encoding="utf-8")
+    (site / "survey.toml").write_text(f"{text}\n[recipe]\n{recipe}\n", encoding="utf-8")
+    monkeypatch.setattr(passes, "run_row", lambda *_, **__: pytest.fail("work was done"))
+    with pytest.raises(RecipeError, match=message):
+        map_site(site)
+
+
+def test_unmigrated_and_step_left_out(page: Path, tmp_path: Path, no_isosurface: None) -> None:
+    """A recipe without migration runs, and every slice says so."""
+    site = copied(page, tmp_path)
+    with (site / "survey.toml").open("a", encoding="utf-8") as file:
+        file.write(
+            '\n[ground]\nvelocity_m_per_ns = 0.09\n[recipe]\nsteps = ["dewow", "bandpass", "background", "envelope"]\n'
+        )
+    result = map_site(site)
+    with rasterio.open(next((result.out / "slices").glob("*cm.tif"))) as raster:
+        assert raster.tags()["PLANUM_MIGRATION"] == "not migrated"
+
+
+def test_cube_opens_lazily(mapped: RunResult, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Opening reads nothing; one row reads one line; stages differ; unknown names are told."""
+    calls = []
+    real = passes.Source.read
+    monkeypatch.setattr(passes.Source, "read", lambda self: calls.append(self.name) or real(self))
+    cube = open_cube(mapped.out.parent, "A/x", stage="migrate")
+    assert calls == []
+    assert cube.dims == ("line", "along", "time")
+    row = cube.isel(line=4).compute()
+    assert len(calls) == 1
+    raw = open_cube(mapped.out.parent, "A/x").isel(line=4).compute()
+    assert row.shape == raw.shape
+    assert float(abs(row - raw).max()) > 0
+    with pytest.raises(SurveyError, match=r"there is no set 'B/x'"):
+        open_cube(mapped.out.parent, "B/x")
+    with pytest.raises(RecipeError, match=r"there is no stage 'migrated'; did you mean 'migrate'\?"):
+        open_cube(mapped.out.parent, "A/x", stage="migrated")
+
+
+def test_plan_holds_every_number(page: Path, tmp_path: Path) -> None:
+    """No setting of the resolved chain is left automatic, and the plan survives JSON."""
+    plan = plan_site(copied(page, tmp_path))
+    for step in plan.sets[0].chain:
+        unset = {k for k, v in step.params.items() if v is None}
+        assert unset <= {"window_m"}, (step.name, unset)  # only what the chosen scope does not use
+    assert type(plan).model_validate_json(plan.model_dump_json()) == plan
+
+
+KILLED = """
+import sys
+from pathlib import Path
+from planum.errors import Problem
+from planum.pipeline import products
+from planum.pipeline.run import map_site
+products.draw_scene = lambda *_: Problem(came="left out")
+print("ready", flush=True)
+map_site(Path(sys.argv[1]))
+"""
+
+
+def test_killed_at_twenty_moments_the_run_is_whole(page: Path, tmp_path: Path, no_isosurface: None) -> None:
+    """SIGKILL at 20 random moments of a run that replaces another: always the old folder or the new, whole.
+
+    The seed fixes the moments as shares of one measured run, the first one, which is let through; each try changes the
+    title, so that all products are written anew, and every fourth empties work/, so that the passes are hit too.
+    """
+    site = copied(page, tmp_path)
+    map_site(site)
+    text = (site / "survey.toml").read_text(encoding="utf-8")
+    rng = random.Random(7)
+    took, killed = 600.0, 0
+    for attempt in range(21):
+        (site / "survey.toml").write_text(text.replace("Invented survey", f"Title {attempt}"), encoding="utf-8")
+        if attempt % 4 == 0:
+            shutil.rmtree(site / "work")
+        process = subprocess.Popen([sys.executable, "-c", KILLED, str(site)], stdout=subprocess.PIPE, text=True)
+        assert process.stdout is not None
+        process.stdout.readline()
+        start = time.monotonic()
+        try:
+            process.wait(timeout=took if attempt == 0 else took * rng.uniform(0.02, 1.0))
+        except subprocess.TimeoutExpired:
+            process.kill()
+            process.wait()
+            killed += 1
+        if attempt == 0:
+            took = time.monotonic() - start
+        assert is_whole(site / "out"), attempt
+    assert killed >= 5  # a run of products alone is shorter than the measured one: some end before their moment
+    final = map_site(site)
+    assert is_whole(final.out)
+    assert list(site.glob(".out*")) == []
+
+
+MEASURED = """
+import resource, sys
+from pathlib import Path
+from planum.errors import Problem
+from planum.pipeline import products
+from planum.pipeline.run import map_site
+products.draw_scene = lambda *_: Problem(came="left out")
+map_site(Path(sys.argv[1]))
+print(resource.getrusage(resource.RUSAGE_SELF).ru_maxrss)
+"""
+
+
+@pytest.mark.skipif(os.name == "nt", reason="peak memory is read from the POSIX resource module")
+def test_memory_does_not_grow_with_lines(tmp_path: Path) -> None:
+    """Four times the lines raise the peak memory of the whole process by less than a tenth."""
+    from dataclasses import replace
+
+    peak = []
+    scene, layout = one_page()
+    for n in (20, 80):
+        site = tmp_path / f"lines-{n}"
+        write_survey(site, scene, replace(layout, width_m=0.25 * (n - 1)), seed=2)
+        with (site / "survey.toml").open("a", encoding="utf-8") as file:
+            file.write("\n[slices]\nbottom_m = 1.2\nstep_m = 0.1\n[ground]\nvelocity_m_per_ns = 0.0875\n")
+        done = subprocess.run([sys.executable, "-c", MEASURED, str(site)], capture_output=True, text=True, check=True)
+        peak.append(int(done.stdout.split()[-1]))
+    assert peak[1] < 1.1 * peak[0], peak
+
+
+def test_problem_of_a_line_names_the_line(page: Path, tmp_path: Path, no_isosurface: None) -> None:
+    """What was set aside says which file and which line of the register it is."""
+    site = copied(page, tmp_path)
+    path = sorted((site / "lines").glob("*.sgy"))[0]
+    path.write_bytes(path.read_bytes()[:2000])
+    problem = map_site(site).set_aside[0]
+    assert isinstance(problem, Problem)
+    assert problem.file.endswith(path.name)
+    assert problem.line == "1"
