@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import shutil
+from dataclasses import replace
 from pathlib import Path
 
 import pytest
@@ -22,6 +23,18 @@ def page(tmp_path_factory: pytest.TempPathFactory) -> Path:
     write_survey(folder, scene, layout, seed=1)
     with (folder / "survey.toml").open("a", encoding="utf-8") as file:
         file.write("\n[slices]\nbottom_m = 1.2\nthickness_m = 0.1\nstep_m = 0.1\n")
+    return folder
+
+
+@pytest.fixture(scope="session")
+def scrap(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """A very small survey, five lines of 3 m and three slices, for what has to be run many times."""
+    folder = tmp_path_factory.mktemp("scrap") / "site"
+    scene, layout = one_page()
+    write_survey(folder, scene, replace(layout, length_m=3.0, width_m=1.0), seed=1)
+    with (folder / "survey.toml").open("a", encoding="utf-8") as file:
+        file.write("\n[ground]\nvelocity_m_per_ns = 0.0875\n")
+        file.write("\n[slices]\ntop_m = 0.4\nbottom_m = 0.7\nthickness_m = 0.1\nstep_m = 0.1\n")
     return folder
 
 
