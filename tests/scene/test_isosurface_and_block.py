@@ -7,7 +7,7 @@ import pytest
 import xarray as xr
 
 from planum.scene.build import build_scene
-from planum.scene.volume import block_from, contour, plane
+from planum.scene.volume import block_from, contour, plane, softened
 
 
 def stack(amplitude: np.ndarray, depth: np.ndarray, y: np.ndarray, x: np.ndarray) -> xr.Dataset:
@@ -106,6 +106,20 @@ def test_pieces_narrower_than_asked_are_left_out() -> None:
     assert contour(block, 0.0, least_m=0.4).n_cells == contour(block, 0.0).n_cells
     assert contour(block, 0.0, least_m=0.8).bounds[0] == pytest.approx(3.6, abs=0.02)
     assert contour(block, 0.0, least_m=1.3).n_cells == 0
+
+
+def test_softening_keeps_places_and_never_enters_unknown_ground() -> None:
+    """A step smoothed by any even kernel is half as high at the step itself."""
+    axis, depth = 0.05 * np.arange(120), 0.1 * np.arange(1, 5)
+    step = np.broadcast_to(axis[None, None, :] > 3.0, (4, 120, 120)).astype(float)  # the edge lies at 3.025 m
+    step[:, 40:43, :] = np.nan
+    soft = softened(block_from(stack(step, depth, axis, axis)), 0.25)
+    assert soft.thinned == 2  # 5 cells per standard deviation
+    surface = contour(soft, 0.5)
+    # linear interpolation near the steepest place of the smoothed step
+    np.testing.assert_allclose(surface.points[:, 0], 3.025, atol=2e-3)
+    # rows 40 to 42 are unknown: from the centre of row 39 to that of row 43 nothing may stand
+    assert not np.any((surface.points[:, 1] > axis[39] + 1e-6) & (surface.points[:, 1] < axis[43] - 1e-6))
 
 
 def test_large_map_coordinates_keep_their_millimetres(ring: xr.Dataset) -> None:

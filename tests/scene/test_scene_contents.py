@@ -5,15 +5,16 @@ from __future__ import annotations
 import numpy as np
 import pytest
 import xarray as xr
+from scipy.ndimage import gaussian_filter
 
 from planum.scene.build import build_scene
 from planum.scene.drawing import WARM, greys
 from planum.scene.frame import frame_of, round_step
 
 
-def test_the_default_slice_runs_through_the_wall(ring: xr.Dataset) -> None:
-    """The wall's own depth is 0.8 m, within 0.35 m."""
-    assert abs(build_scene(ring).depth_m - 0.8) < 0.35
+def test_the_default_slice_is_the_foot_of_the_wall(ring: xr.Dataset) -> None:
+    """The wall fades as exp(-((d - 0.8) / 0.35)^4): half at 1.12 m, a twentieth at 1.26 m, nothing at 1.4 m."""
+    assert 1.05 < build_scene(ring).depth_m < 1.35
 
 
 def test_the_default_isosurface_is_the_ring_and_the_pipe(ring: xr.Dataset) -> None:
@@ -22,9 +23,64 @@ def test_the_default_isosurface_is_the_ring_and_the_pipe(ring: xr.Dataset) -> No
     assert len(bodies) == 2
     west, east, south, north, bottom, top = max(bodies, key=lambda b: b.bounds[1] - b.bounds[0]).bounds
     # exp(-(r / w)^4) falls to a half at r = w (ln 2)^(1/4) = 0.912 w: the ring's outer edge stands 3.6 + 0.46 m from
-    # (46, 25), its top and foot at 0.8 -+ 0.32 m; the level is half way up to a noisy top: within one cell
+    # (46, 25), its top and foot at 0.8 -+ 0.32 m; smoothing leaves an edge's half height where it is and the level is
+    # half way up to a noisy top: within one cell
     assert (west, east, south, north) == pytest.approx((41.94, 50.06, 20.94, 29.06), abs=0.2)
     assert (bottom, top) == pytest.approx((-1.12, -0.48), abs=0.1)
+
+
+def cluttered(seed: int) -> xr.Dataset:
+    """Return a site of 16 m x 20 m in 5 cm cells: a wall of 1 x 9 m at 0.65 to 0.95 m, under stones twice as strong.
+
+    1500 stones of one or two lines' width (10 x 25 cm) lie at 0.1 to 0.3 m: more cells than the wall has.
+    """
+    rng = np.random.default_rng(seed)
+    depth, y, x = 0.1 + 0.1 * np.arange(12), 0.05 * np.arange(320), 0.05 * np.arange(400)
+    amplitude = np.abs(gaussian_filter(rng.normal(size=(12, 320, 400)), (0.7, 2.0, 1.0)))
+    amplitude *= 0.2 / amplitude.std()
+    for d, n, e in zip(rng.integers(0, 3, 1500), rng.integers(0, 315, 1500), rng.integers(0, 398, 1500), strict=True):
+        amplitude[d, n : n + 5, e : e + 2] += 4.0
+    amplitude[6:9, 100:280, 150:170] += 2.0
+    return xr.Dataset(
+        {
+            "amplitude": (("depth", "y", "x"), amplitude.astype(np.float32)),
+            "coverage": (("y", "x"), np.ones((320, 400), np.uint8)),
+            "depth_bounds": (("depth", "bound"), np.stack([depth - 0.05, depth + 0.05], 1)),
+            "depth_error": ("depth", np.full(12, 0.03)),
+        },
+        coords={"depth": depth, "x": x, "y": y},
+        attrs={"cell_m": 0.05},
+    )
+
+
+@pytest.mark.parametrize("seed", [1, 2, 3])
+def test_a_wall_is_shown_under_stones_twice_as_strong(seed: int) -> None:
+    scene = build_scene(cluttered(seed))
+    # the last slice the wall is in: 0.9 m
+    assert scene.depth_m == pytest.approx(0.9)
+    bodies = scene.isosurface.connectivity().split_bodies()
+    wall = max(bodies, key=lambda b: b.area)
+    # typed from x 7.475 to 8.475 and y 4.975 to 13.975 m. Smoothed by 0.25 m, an edge passes 16 to 84 % of its height
+    # within that distance (normal distribution), and the level lies between; upright only half a step of slices is lost
+    assert wall.bounds[:4] == pytest.approx((7.475, 8.475, 4.975, 13.975), abs=0.25)
+    assert wall.bounds[4:] == pytest.approx((-0.95, -0.65), abs=0.05)
+    # nothing of the stones is larger than a quarter of it
+    assert sum(b.area for b in bodies if b is not wall) < 0.25 * wall.area
+
+
+def test_the_level_applies_to_the_smoothed_slices_and_the_notes_say_so(ring: xr.Dataset) -> None:
+    """A field cos(kx) keeps its places and loses exp(-(k s)^2 / 2) of its height (Fourier transform of a Gaussian)."""
+    wave = ring.assign(amplitude=(ring.amplitude * 0.0).fillna(0.0) + np.cos(np.pi * (ring.x - ring.x[0]) / 4.0))
+    scene = build_scene(wave, level=0.5)
+    assert "isosurface of slices smoothed over 0.5 m" in scene.notes()
+    kept = np.exp(-0.5 * (np.pi / 4.0 * 0.25) ** 2)
+    edges = np.arccos(0.5 / kept) * 4.0 / np.pi  # m from a crest
+    x = scene.isosurface.points[:, 0].astype(float) - scene.block.x[0]
+    inner = x[(x > 4.0) & (x < 12.0)]  # one crest at 8 m, away from the rims
+    # linear interpolation in cells of 0.2 m, of second order: (0.2 pi / 4)^2 / 8 of the height
+    np.testing.assert_allclose(np.abs(inner - 8.0), edges, atol=0.005)
+    raw = np.arccos(0.5) * 4.0 / np.pi
+    assert raw - edges > 0.01  # the unsmoothed surface would be told apart
 
 
 def test_level_and_slice_can_be_chosen_without_touching_the_first_scene(ring: xr.Dataset) -> None:
@@ -41,10 +97,10 @@ def test_texts_state_interval_error_level_and_caution(ring: xr.Dataset) -> None:
     assert scene.slice_text() == "slice 0.75 to 0.85 m, ± 0.05 m"
     assert "halfway from the median" in scene.level_text()
     assert "depths drawn 3 times taller" in scene.notes()
-    assert any("under 1 m across left out" in note for note in scene.notes())
+    assert any("under 1.5 m across left out" in note for note in scene.notes())
     assert "no clearance to dig" in scene.caution
-    assert scene.at_level(12345.6).level_text() == "nothing reaches amplitude 12 346"
-    assert "nothing reaches" in scene.at_level(9.0).level_text()
+    assert scene.at_level(12345.6).level_text() == "nothing 1.5 m across reaches amplitude 12 346"
+    assert "nothing 1.5 m across reaches" in scene.at_level(9.0).level_text()
     assert build_scene(ring.isel(depth=[3])).level_text() == "one slice: no isosurface"
 
 

@@ -33,7 +33,7 @@ def ring_site() -> xr.Dataset:
             "depth_error": ("depth", 0.03 + 0.03 * depth),
         },
         coords={"depth": depth, "x": x, "y": y},
-        attrs={"crs": "", "title": "Marrowby Field", "code": "MBF1", "cell_m": CELL},
+        attrs={"crs": "", "title": "Marrowby Field", "code": "MBF1", "cell_m": CELL, "statement_line_spacing_m": 0.25},
     ).isel(y=slice(None, None, -1))
 
 

@@ -27,10 +27,11 @@ from planum.outputs.section import DepthScale, draw_section
 from planum.outputs.stack import write_stack
 from planum.outputs.stretch import stretch_of
 from planum.outputs.writing import aside
-from planum.pipeline.telling import Drawn, best_slices, report_context
+from planum.pipeline.telling import Drawn, report_context
 from planum.pipeline.told import PRODUCTS_VERSION, RunFacts, statements, versions
 from planum.records import Facts, Plan, SetPlan, Statement, Strip, canon, key
 from planum.scene.picture import render_safely
+from planum.slices.structure import best_slices, structure
 
 __all__ = ["section_key", "section_picture", "write_products"]
 
@@ -160,7 +161,12 @@ def write_products(
         named["isosurface"] = pictures / "isosurface.png"
     else:
         run = replace(run, warnings=(*run.warnings, replace(problem, severity="warning")))
-    shown = Drawn(named, drawn, best_slices(_levels(stack)), {label: name for (label, _), name in linked.items()})
+    shown = Drawn(
+        named,
+        drawn,
+        best_slices(_scores(stack, told[0].line_spacing_m)),
+        {label: name for (label, _), name in linked.items()},
+    )
     context = report_context(run, told, shown, folder)
     write_report(folder / "report.html", context)
     _write_record(folder, run, told, token)
@@ -172,11 +178,10 @@ def draw_scene(slices: Path, picture: Path, site: SiteShapes) -> Problem | None:
     return render_safely(slices, picture, lines=[(line.name, line.coords) for line in site.lines])
 
 
-def _levels(stack: xr.Dataset) -> list[float]:
-    """Return each slice's 99th percentile, from a thinned plane."""
-    every = max(1, stack.sizes["y"] * stack.sizes["x"] // 40_000)
-    planes = (plane(stack, i).ravel()[::every] for i in range(stack.sizes["depth"]))
-    return [float(np.nanpercentile(p, 99)) if np.isfinite(p).any() else 0.0 for p in planes]
+def _scores(stack: xr.Dataset, line_spacing_m: float) -> list[float]:
+    """Return how much extended structure each slice shows."""
+    spacing = line_spacing_m / float(stack.attrs["cell_m"])
+    return [structure(plane(stack, i), spacing=spacing) for i in range(stack.sizes["depth"])]
 
 
 def _copy_sections(pictures: Path, plan: Plan, sections: Mapping[tuple[str, int], Path]) -> dict[tuple[str, str], str]:

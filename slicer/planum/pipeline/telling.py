@@ -11,7 +11,7 @@ from planum.pipeline.recipe import settings_text
 from planum.pipeline.told import RunFacts, versions
 from planum.records import Plan, Statement
 
-__all__ = ["FILES", "Drawn", "best_slices", "report_context"]
+__all__ = ["FILES", "Drawn", "report_context"]
 
 FILES = (
     ("slices/{code}_d040-050cm.tif", "one GeoTIFF per slice (float32, strong = high), with its QGIS and SLD style"),
@@ -22,7 +22,6 @@ FILES = (
     ("pictures/", "every slice, the contact sheet, the isosurface, one section per line"),
     ("run.json", "every number of this run; `planum map SITE --plan run.json` repeats it"),
 )
-MOST_BEST = 6
 
 
 @dataclass(frozen=True)
@@ -53,7 +52,10 @@ def report_context(run: RunFacts, statements: Sequence[Statement], drawn: Drawn,
         surveyed.append(("Ground meets noise", f"{first.limit_depth_m:.2f} m; below it only strong reflectors show"))
     leading, focus = [], None
     if "isosurface" in named:
-        alt, caption = "Isosurface of strong amplitudes", "Strong amplitudes as a surface, with one depth slice."
+        alt, caption = (
+            "Isosurface of strong bodies",
+            "What stands out over several lines, as bodies, with one depth slice.",
+        )
         leading.append(Picture(named["isosurface"], alt, caption))
     if "focus" in named:
         focus = Picture(named["focus"], "How sharp the migrated lines are at each velocity")
@@ -81,17 +83,6 @@ def report_context(run: RunFacts, statements: Sequence[Statement], drawn: Drawn,
         versions=tuple(versions().items()),
         hashes=tuple((name, f.file_id) for name, f in run.facts.items()),
     )
-
-
-def best_slices(levels: Sequence[float], *, most: int = MOST_BEST) -> list[int]:
-    """Return the slices shown in large: the strongest, at least two apart, in depth order."""
-    chosen: list[int] = []
-    for i in sorted(range(len(levels)), key=lambda k: -levels[k]):
-        if all(abs(i - j) >= 2 for j in chosen):
-            chosen.append(i)
-        if len(chosen) == most:
-            break
-    return sorted(chosen)
 
 
 def _files(plan: Plan, folder: Path) -> list[tuple[str, str]]:

@@ -11,16 +11,25 @@ import xarray as xr
 
 from planum.constants import CAUTIONS
 from planum.scene.frame import Frame, frame_of
-from planum.scene.volume import Block, block_from, contour, plane
+from planum.scene.volume import Block, block_from, contour, plane, softened
+from planum.slices.structure import best_slices, structure
 
 __all__ = ["ISO_QUANTILES", "Scene", "build_scene"]
 
-ISO_QUANTILES = (0.5, 0.999)
-"""The default isosurface lies halfway between these quantiles of the known cells: half height is where a body's edge
-is usually read, and neither quantile heeds a few wild cells."""
-SPECK_CELLS = 5
-"""Bodies less wide in plan are left out: a cell is a fifth of the line spacing by default, and what one line alone
-has seen has no shape."""
+SOFT = 1.0
+"""Standard deviation, in line spacings, of the smoothing before the isosurface is cut: what neighbouring lines saw of
+one wall becomes one body, and a wall still stands out of its rooms."""
+SPECK_SPACINGS, SPECK_M = 4.0, 1.5
+"""Bodies whose diagonal in plan is less than the larger of these are left out: what few lines have seen has no shape,
+and a square of 1 m is the least that is told from stones."""
+ISO_QUANTILES = (0.5, 0.99)
+"""The default isosurface lies halfway between these quantiles of the smoothed cells of the slices that show most
+structure: half height is where a body's edge is usually read."""
+STANDING = 0.6
+"""The default slice is the foot of the best-structured one: from it downwards, the last with this share of its score.
+Bodies then stand on the slice; on the best one itself they would lie below it, hidden."""
+ISO_ORIGIN = "halfway from the median to the strongest hundredth of the best slices"
+SPACING_ATTR, SPACING_CELLS = "statement_line_spacing_m", 5.0
 STRETCH = (0.02, 0.995)
 """Quantiles of the known cells drawn lightest and darkest, one stretch for all depths."""
 SHAPE = 0.16
@@ -33,12 +42,15 @@ Lines = Sequence[tuple[str, np.ndarray]]
 class Scene:
     """What is drawn. Meshes are in m from ``block.origin`` with z = -depth, never exaggerated themselves.
 
-    ``isosurface`` is empty when nothing reaches ``level``; ``plane`` is the slice number ``index``.
+    ``isosurface`` is that of ``soft``, the block smoothed along its slices, and empty when nothing reaches ``level``;
+    ``plane`` is the slice number ``index`` of the block itself. ``spacing_m`` is the distance of the lines.
     """
 
     title: str
     code: str
     block: Block
+    soft: Block
+    spacing_m: float
     isosurface: pv.PolyData
     plane: pv.ImageData
     lines: pv.PolyData
@@ -62,9 +74,8 @@ class Scene:
 
     def at_level(self, level: float) -> Scene:
         """Return the scene with its isosurface at another level."""
-        return replace(
-            self, level=level, level_origin="chosen", isosurface=contour(self.block, level, least_m=_speck(self.block))
-        )
+        surface = contour(self.soft, level, least_m=_speck(self.spacing_m))
+        return replace(self, level=level, level_origin="chosen", isosurface=surface)
 
     def at_slice(self, index: int) -> Scene:
         """Return the scene with another slice; indices beyond the ends give the end."""
@@ -81,14 +92,16 @@ class Scene:
         if self.block.depth.size < 2:
             return "one slice: no isosurface"
         if self.isosurface.n_cells == 0:
-            return f"nothing reaches amplitude {_plain(self.level)}"
+            return f"nothing {_speck(self.spacing_m):.2g} m across reaches amplitude {_plain(self.level)}"
         return f"isosurface at amplitude {_plain(self.level)} ({self.level_origin})"
 
     def notes(self) -> tuple[str, ...]:
-        """Return what must be known to read the picture: exaggeration, thinning."""
+        """Return what must be known to read the picture: smoothing, what is left out, exaggeration, thinning."""
         notes = []
         if self.isosurface.n_cells:
-            notes.append(f"bodies under {_speck(self.block):.2g} m across left out")
+            width = 2.0 * SOFT * self.spacing_m
+            notes.append(f"isosurface of slices smoothed over {width:.2g} m")
+            notes.append(f"bodies under {_speck(self.spacing_m):.2g} m across left out")
         if self.exaggeration != 1.0:
             notes.append(f"depths drawn {self.exaggeration:g} times taller")
         if self.block.thinned > 1:
@@ -118,10 +131,11 @@ def build_scene(
     lines
         Name and (n, 2) map x, y in m of each recorded line.
     level
-        Amplitude of the isosurface; by default halfway between the median and the 0.999 quantile.
+        Amplitude of the isosurface, which is cut from slices smoothed by a Gaussian of one line spacing; by default
+        halfway between the median and the 0.99 quantile of what the smoothed slices with most structure hold.
     slice_depth
-        Depth in m whose slice is drawn (the nearest); by default the depth with the strongest features, measured
-        as the 0.99 quantile above the median.
+        Depth in m whose slice is drawn (the nearest); by default the foot of the one with most structure
+        (:func:`~planum.slices.structure.structure`): from there down, the last that keeps 0.6 of its score.
     exaggeration
         How many times taller depths are drawn; by default 1, or the whole number that keeps a flat site readable.
 
@@ -134,21 +148,26 @@ def build_scene(
     known = block.amplitude[np.isfinite(block.amplitude)]
     if known.size == 0:
         raise ValueError("the slices hold no known cell; there is nothing to draw")
+    spacing = _spacing(slices, block)
+    soft = softened(block, SOFT * spacing)
+    step = block.cell_m * block.thinned
+    scores = [structure(block.layer(i), spacing=spacing / step) for i in range(block.depth.size)]
     origin = "chosen"
     if level is None:
-        level = float(np.mean(np.quantile(known, ISO_QUANTILES)))
-        origin = "halfway from the median to the strongest thousandth"
+        level, origin = _level(soft, scores), ISO_ORIGIN
     if exaggeration is None:
         exaggeration = _exaggeration(block)
     if not (np.isfinite(level) and np.isfinite(exaggeration) and exaggeration > 0):
         raise ValueError(f"level and exaggeration must be finite, exaggeration above 0; got {level}, {exaggeration}")
-    index = _strongest(block) if slice_depth is None else int(np.argmin(np.abs(block.depth - slice_depth)))
+    index = _foot(scores) if slice_depth is None else int(np.argmin(np.abs(block.depth - slice_depth)))
     low, high = (float(q) for q in np.quantile(known, STRETCH))
     return Scene(
         title=str(slices.attrs.get("title", "")),
         code=str(slices.attrs.get("code", "")),
         block=block,
-        isosurface=contour(block, level, least_m=_speck(block)),
+        soft=soft,
+        spacing_m=spacing,
+        isosurface=contour(soft, level, least_m=_speck(spacing)),
         plane=plane(block, index),
         lines=_polylines(lines, block.origin),
         frame=frame_of(block.box, origin=block.origin, exaggeration=exaggeration),
@@ -165,25 +184,33 @@ def _plain(value: float) -> str:
     return f"{value:.3g}" if abs(value) < 1000 else f"{value:,.0f}".replace(",", " ")
 
 
-def _speck(block: Block) -> float:
-    return SPECK_CELLS * block.cell_m * block.thinned
+def _speck(spacing_m: float) -> float:
+    return max(SPECK_SPACINGS * spacing_m, SPECK_M)
+
+
+def _spacing(slices: xr.Dataset, block: Block) -> float:
+    """Return the distance of the lines (m) as the run states it, otherwise five cells, as the run chooses cells."""
+    stated = float(slices.attrs.get(SPACING_ATTR, 0.0))
+    return max(stated if stated > 0.0 else SPACING_CELLS * block.cell_m, block.cell_m)
+
+
+def _level(soft: Block, scores: Sequence[float]) -> float:
+    # slices with little to show would only dilute the quantile
+    best = [index for index in best_slices(scores) if scores[index] >= STANDING * max(scores)]
+    layers = np.concatenate([soft.layer(index).ravel() for index in best])
+    return float(np.mean(np.quantile(layers[np.isfinite(layers)], ISO_QUANTILES)))
+
+
+def _foot(scores: Sequence[float]) -> int:
+    best = int(np.argmax(scores))
+    weaker = np.flatnonzero(np.array(scores[best:]) < STANDING * scores[best])
+    return best + int(weaker[0]) - 1 if weaker.size else len(scores) - 1
 
 
 def _exaggeration(block: Block) -> float:
     west, east, south, north, bottom, top = block.box
     wide = max(east - west, north - south)
     return float(max(1, round(SHAPE * wide / (top - bottom))))
-
-
-def _strongest(block: Block) -> int:
-    contrast = np.full(block.depth.size, -np.inf)
-    for index in range(contrast.size):
-        layer = block.layer(index)
-        layer = layer[np.isfinite(layer)]
-        if layer.size:
-            middle, high = np.quantile(layer, (0.5, 0.99))
-            contrast[index] = high - middle
-    return int(np.argmax(contrast))
 
 
 def _polylines(lines: Lines, origin: tuple[float, float]) -> pv.PolyData:

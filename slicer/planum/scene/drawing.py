@@ -73,7 +73,7 @@ def draw_isosurface(plotter: pv.Plotter, scene: Scene) -> Any:
 
 def draw_lines(plotter: pv.Plotter, scene: Scene, *, scale: float = 1.0) -> Any:
     """Draw the recorded lines on the surface, thin and pale."""
-    look = {"color": LINE, "opacity": 0.45, "line_width": 1.2 * scale, "lighting": False}
+    look = {"color": LINE, "opacity": 0.3, "line_width": 1.2 * scale, "lighting": False}
     return _put(plotter, scene.lines, scene, name="lines", **look)
 
 
@@ -140,7 +140,7 @@ def aim(
     scene: Scene,
     *,
     bearing_deg: float = 208.0,
-    height_deg: float = 36.0,
+    height_deg: float = 40.0,
     window: tuple[float, float, float, float] = (0.04, 0.96, 0.12, 0.83),
 ) -> None:
     """Point the camera from the south-west and above, so that frame and labels fill ``window``.
@@ -198,7 +198,7 @@ def pixels(scene: Scene, *, size: tuple[int, int], scale: float) -> np.ndarray:
             draw_legend(plotter, actor)
         aim(plotter, scene)
         # soft shade where surfaces meet: a wall stands in its slice instead of floating above it
-        plotter.enable_ssao(radius=0.04 * scene.width_m, bias=0.002 * scene.width_m, kernel_size=32, blur=True)
+        plotter.enable_ssao(radius=0.04 * scene.width_m, bias=0.002 * scene.width_m, kernel_size=16, blur=True)
         return np.asarray(plotter.screenshot(return_img=True))[..., :3]
     finally:
         plotter.close()

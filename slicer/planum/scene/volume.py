@@ -6,7 +6,8 @@ library's float32, so large ones are counted from a round local origin, which th
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from functools import cached_property
 
 import numpy as np
 import pyvista as pv
@@ -15,8 +16,9 @@ from scipy.sparse import coo_array
 from scipy.sparse.csgraph import connected_components
 
 from planum.schema import check_slices
+from planum.slices.structure import FINE, coarse, smoothed
 
-__all__ = ["LARGEST", "Block", "block_from", "contour", "plane"]
+__all__ = ["LARGEST", "Block", "block_from", "contour", "plane", "softened"]
 
 LARGEST = 12_000_000
 """Most points a block may hold; larger stacks are averaged over square groups of cells, and the picture says so."""
@@ -30,14 +32,13 @@ class Block:
     """A stack of slices ready to draw. Arrays are (depth, y, x) with all axes ascending as named here.
 
     ``z`` (m, ascending, negative down), ``y``, ``x`` (m, from ``origin``) are cell centres; ``amplitude`` holds NaN
-    where nothing is known; ``grid`` is the drawing library's view with 0 there and a point array ``known``.
+    where nothing is known.
     """
 
     x: np.ndarray
     y: np.ndarray
     z: np.ndarray
     amplitude: np.ndarray
-    grid: pv.ImageData | pv.RectilinearGrid
     origin: tuple[float, float]
     bounds_m: np.ndarray
     error_m: np.ndarray
@@ -52,6 +53,11 @@ class Block:
     def layer(self, index: int) -> np.ndarray:
         """Return the (y, x) layer of the ``index``-th depth, counted downwards."""
         return self.amplitude[self.z.size - 1 - index]
+
+    @cached_property
+    def grid(self) -> pv.ImageData | pv.RectilinearGrid:
+        """The drawing library's view: 0 where nothing is known, and a point array ``known``."""
+        return _grid(self.x, self.y, self.z, self.amplitude)
 
     @property
     def box(self) -> tuple[float, float, float, float, float, float]:
@@ -94,7 +100,7 @@ def block_from(slices: xr.Dataset, *, largest: int = LARGEST) -> Block:
         thin += 1
     x, y = np.asarray(slices.x.values, float), np.asarray(slices.y.values, float)
     cell = float((x[-1] - x[0]) / (x.size - 1))
-    layers = [_thin(np.asarray(slices.amplitude.isel(depth=i).values, np.float32), thin) for i in range(n_depth)]
+    layers = [coarse(np.asarray(slices.amplitude.isel(depth=i).values, np.float32), thin) for i in range(n_depth)]
     amplitude = np.stack(layers[::-1])
     origin = _origin(x, y)
     x, y = _centres(x, thin) - origin[0], _centres(y, thin) - origin[1]
@@ -104,13 +110,29 @@ def block_from(slices: xr.Dataset, *, largest: int = LARGEST) -> Block:
         y=y,
         z=z,
         amplitude=amplitude,
-        grid=_grid(x, y, z, amplitude),
         origin=origin,
         bounds_m=np.asarray(slices.depth_bounds.values, float),
         error_m=np.asarray(slices.depth_error.values, float),
         cell_m=cell,
         thinned=thin,
     )
+
+
+def softened(block: Block, sigma_m: float) -> Block:
+    """Return the block with each depth smoothed by a Gaussian of ``sigma_m`` (m), on cells the Gaussian can fill.
+
+    Cells finer than 0.4 standard deviations are joined first: the surface loses nothing and has a fraction of the
+    triangles. A joined cell is known where all its cells are, so nothing is drawn on unknown ground.
+    """
+    step = block.cell_m * block.thinned
+    by = max(1, int(sigma_m / step / FINE))
+    layers = []
+    for layer in block.amplitude:
+        joined = coarse(layer, by)
+        whole = coarse(np.isfinite(layer).astype(np.float32), by) == 1.0
+        layers.append(np.where(whole, smoothed(joined, sigma=sigma_m / step / by), np.float32(np.nan)))
+    x, y = _centres(block.x, by), _centres(block.y, by)
+    return replace(block, x=x, y=y, amplitude=np.stack(layers), thinned=block.thinned * by)
 
 
 def contour(block: Block, level: float, *, least_m: float = 0.0) -> pv.PolyData:
@@ -210,16 +232,3 @@ def _origin(x: np.ndarray, y: np.ndarray) -> tuple[float, float]:
 def _centres(axis: np.ndarray, thin: int) -> np.ndarray:
     step = _step(axis)
     return axis[0] + step * (thin - 1) / 2.0 + step * thin * np.arange(-(-axis.size // thin))
-
-
-def _thin(layer: np.ndarray, thin: int) -> np.ndarray:
-    """Mean of the known cells of each thin x thin group; groups without any stay NaN."""
-    if thin == 1:
-        return layer
-    n_y, n_x = layer.shape
-    padded = np.pad(layer, ((0, -n_y % thin), (0, -n_x % thin)), constant_values=np.nan)
-    groups = padded.reshape(padded.shape[0] // thin, thin, padded.shape[1] // thin, thin)
-    known = np.isfinite(groups)
-    count = known.sum(axis=(1, 3))
-    total = np.where(known, groups, 0.0).sum(axis=(1, 3), dtype=float)
-    return np.where(count > 0, total / np.maximum(count, 1), np.nan).astype(np.float32)

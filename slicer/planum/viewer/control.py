@@ -47,8 +47,8 @@ class Controller:
     message: str = field(default="", init=False)
 
     def __post_init__(self) -> None:
-        """Note the levels the slider runs over: from the middle of the known cells to the strongest."""
-        known = self.scene.block.amplitude[np.isfinite(self.scene.block.amplitude)]
+        """Note the levels the slider runs over: from the middle of the smoothed cells to the strongest."""
+        known = self.scene.soft.amplitude[np.isfinite(self.scene.soft.amplitude)]
         low, high = float(np.median(known)), float(known.max())
         self.levels = (low, high if high > low else low + 1.0)
         self.depths = (float(self.scene.block.depth[0]), float(self.scene.block.depth[-1]))

@@ -1,0 +1,101 @@
+"""How much extended structure a slice shows: walls and ditches count, stones do not, however strong they are.
+
+Smoothing over about one line spacing leaves what several lines have seen together and levels what one line alone has
+seen. What then stands out of the plane's own scatter has extent. Plain arrays only.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+import numpy as np
+from scipy.ndimage import gaussian_filter
+
+__all__ = ["FINE", "best_slices", "coarse", "smoothed", "structure"]
+
+SPACINGS = 1.25
+"""Standard deviation of the smoothing in line spacings: more than one, or a stone shared by two lines would pass."""
+HIGH = 0.98
+"""A wall of 60 cm through half of a 20 m grid covers 1.5 % of it; the quantile must see less than that again."""
+FINE = 2.5
+"""Cells per standard deviation that are kept: a Gaussian of 2.5 cells holds nothing a coarser cell would lose."""
+REACH = 3.0
+"""Standard deviations after which the Gaussian is cut: it has fallen to a hundredth."""
+MOST_BEST = 6
+
+
+def structure(plane: np.ndarray, *, spacing: float) -> float:
+    """Return how far extended features stand out of one slice, in robust standard deviations.
+
+    The plane is smoothed over 1.25 line spacings; its 0.98 quantile less its median is divided by 1.4826 times the
+    median absolute deviation, which is the standard deviation of a normal distribution (Rousseeuw & Croux 1993, from
+    memory). A plane of smoothed normal noise gives 2.05, the 0.98 quantile of the normal distribution.
+
+    Parameters
+    ----------
+    plane : (y, x)
+        Amplitude, NaN where nothing is known.
+    spacing
+        Distance of the lines in cells of the plane.
+
+    Returns
+    -------
+    float
+        0 or more; does not heed the unit of amplitude. 0 for a plane that is unknown or all the same.
+    """
+    sigma = SPACINGS * spacing
+    by = max(1, int(sigma / FINE))
+    known = smoothed(coarse(plane, by), sigma=sigma / by)
+    known = known[np.isfinite(known)].astype(float)
+    if known.size == 0:
+        return 0.0
+    middle, high = np.quantile(known, (0.5, HIGH))
+    # ground that is all the same but for the features has no median deviation
+    scatter = 1.4826 * float(np.median(np.abs(known - middle))) or float(known.std())
+    return float((high - middle) / scatter) if scatter > 0.0 else 0.0
+
+
+def best_slices(scores: Sequence[float], *, most: int = MOST_BEST) -> list[int]:
+    """Return the slices with the highest scores, at least two apart, in depth order."""
+    chosen: list[int] = []
+    for i in sorted(range(len(scores)), key=lambda k: -scores[k]):
+        if all(abs(i - j) >= 2 for j in chosen):
+            chosen.append(i)
+        if len(chosen) == most:
+            break
+    return sorted(chosen)
+
+
+def smoothed(plane: np.ndarray, *, sigma: float) -> np.ndarray:
+    """Return a plane smoothed by a Gaussian over its known cells, float32; unknown cells stay NaN.
+
+    The Gaussian of the values is divided by the Gaussian of what is known (normalised convolution, Knutsson & Westin
+    1993, from memory), so a constant stays one to the very rim of the known ground.
+
+    Parameters
+    ----------
+    plane : (y, x)
+        Amplitude, NaN where nothing is known.
+    sigma
+        Standard deviation in cells; 0 gives the plane itself.
+    """
+    plane = np.asarray(plane, np.float32)
+    if sigma == 0.0:
+        return plane
+    known = np.isfinite(plane)
+    values = gaussian_filter(np.where(known, plane, np.float32(0.0)), sigma, mode="constant", truncate=REACH)
+    weight = gaussian_filter(known.astype(np.float32), sigma, mode="constant", truncate=REACH)
+    return np.divide(values, weight, out=np.full_like(plane, np.nan), where=known)
+
+
+def coarse(plane: np.ndarray, by: int) -> np.ndarray:
+    """Return the mean of the known cells of each ``by`` x ``by`` group, float32; groups without any stay NaN."""
+    if by == 1:
+        return plane
+    n_y, n_x = plane.shape
+    padded = np.pad(plane, ((0, -n_y % by), (0, -n_x % by)), constant_values=np.nan)
+    known = np.isfinite(padded)
+    groups = (padded.shape[0] // by, by, padded.shape[1] // by, by)
+    count = known.reshape(groups).sum(axis=(1, 3))
+    total = np.where(known, padded, 0.0).reshape(groups).sum(axis=(1, 3), dtype=float)
+    return np.where(count > 0, total / np.maximum(count, 1), np.nan).astype(np.float32)
