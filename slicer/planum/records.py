@@ -170,6 +170,7 @@ class Facts(Record):
     direct: float = Field(description="envelope of the typical trace's direct wave")
     first_xy: tuple[float, float] | None = Field(None, description="header position of the first trace, m")
     last_xy: tuple[float, float] | None = None
+    bend_m: float = Field(0.0, description="largest distance of a header position from the straight line, m")
     header: dict[str, Any] = {}
     problems: tuple[dict[str, Any], ...] = ()
 
@@ -305,7 +306,7 @@ class Plan(Record):
     title: str
     code: str
     crs: str | None
-    cell_m: float
+    cell_m: float = Field(gt=0)
     bounds: tuple[float, float, float, float] = Field(description="west, south, east, north of the common raster")
     intervals_m: tuple[tuple[float, float], ...]
     statistic: Literal["mean"] = "mean"

@@ -8,6 +8,7 @@ import pytest
 
 from planum.errors import MachineError
 from planum.pipeline import exchange
+from planum.pipeline.store import Store
 
 
 def folder(path: Path, text: str) -> Path:
@@ -95,3 +96,15 @@ def test_a_folder_of_somebody_else_is_never_replaced(tmp_path: Path) -> None:
         exchange.check_place(letters)
     exchange.check_place(folder(tmp_path / "out", "old"))
     exchange.check_place(tmp_path / "new")
+
+
+def test_a_link_is_never_written_through(tmp_path: Path) -> None:
+    """A survey folder that came from elsewhere may hold links named out and work: both are refused."""
+    elsewhere = folder(tmp_path / "elsewhere", "mine")
+    (tmp_path / "out").symlink_to(elsewhere)
+    with pytest.raises(MachineError, match="something else than a run stands here"):
+        exchange.check_place(tmp_path / "out")
+    (tmp_path / "work").symlink_to(elsewhere)
+    with pytest.raises(MachineError, match="work is a link or a file"):
+        Store(tmp_path / "work")
+    assert sorted(p.name for p in elsewhere.iterdir()) == ["run.json"]

@@ -10,6 +10,7 @@ import shutil
 import subprocess
 import sys
 import time
+from collections.abc import Callable
 from pathlib import Path
 
 import numpy as np
@@ -17,7 +18,7 @@ import pytest
 import rasterio
 import xarray as xr
 
-from planum.errors import Problem, RecipeError, SurveyError
+from planum.errors import PlanumError, Problem, RecipeError, SurveyError
 from planum.pipeline import census, passes
 from planum.pipeline.cubes import open_cube
 from planum.pipeline.run import RunResult, map_site, plan_site, read_run
@@ -137,6 +138,30 @@ def test_plan_can_be_repeated(page: Path, tmp_path: Path, no_isosurface: None) -
     assert rasters(repeated.out) == rasters(first.out)
     assert rasters(changed.out) != rasters(first.out)
     assert {p.name for p in site.glob("out*")} == {"out", "out-other", "out-again"}
+
+
+@pytest.mark.parametrize(
+    ("spoil", "message"),
+    [
+        (lambda plan: plan.pop("sets"), "no plan can be read"),
+        (lambda plan: plan["sets"][0]["chain"][0].update(name="os.system"), "there is no step 'os.system'"),
+        (lambda plan: plan["sets"][0]["chain"][0]["params"].update(window_ns="x"), "no plan can be read"),
+        (lambda plan: plan.update(bounds=[0, 0, 1e9, 1e9]), "the grids span"),
+        (lambda plan: plan["sets"][0]["entries"][0].update(file="../../secret.sgy"), "outside|leaves|inside"),
+    ],
+)
+def test_a_plan_from_elsewhere_is_not_trusted(
+    mapped: RunResult, tmp_path: Path, spoil: Callable[[dict], None], message: str
+) -> None:
+    """A run.json is a file like any other: unknown steps, absurd rasters and paths out of the folder are refused."""
+    site = tmp_path / "site"
+    shutil.copytree(mapped.out.parent, site)
+    record = json.loads((site / "out" / "run.json").read_text(encoding="utf-8"))
+    spoil(record["plan"])
+    (tmp_path / "run.json").write_text(json.dumps(record), encoding="utf-8")
+    with pytest.raises(PlanumError, match=message):
+        map_site(site, plan=tmp_path / "run.json", name="other")
+    assert not (site / "out-other").exists()
 
 
 def test_one_changed_line_redoes_one_line(

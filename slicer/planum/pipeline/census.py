@@ -14,6 +14,7 @@ from pathlib import Path
 from typing import Any, TypeVar
 
 import numpy as np
+from pydantic import ValidationError
 from scipy.fft import next_fast_len, rfft
 from scipy.ndimage import uniform_filter1d
 from scipy.signal import hilbert
@@ -26,7 +27,7 @@ from planum.records import Facts, key
 
 __all__ = ["CENSUS_VERSION", "Source", "census", "facts_of", "in_order"]
 
-CENSUS_VERSION = 1
+CENSUS_VERSION = 2
 """Raised when the numbers change, so that kept facts are made again."""
 
 MOST_TRACES = 600
@@ -73,9 +74,9 @@ def census(
     def one(source: Source) -> Facts | Problem:
         try:
             file_id = store.file_id(source.path, source.name)
-            kept = store.load_json("census", source.facts_key(file_id))
+            kept = _kept(store.load_json("census", source.facts_key(file_id)))
             if kept is not None:
-                return Facts.model_validate(kept)
+                return kept
             facts = facts_of(source.read(), file_id=file_id, centre_ghz=source.options.centre_frequency_ghz or 0.4)
         except LineError as fault:
             return replace(fault.problems[0], severity="warning")
@@ -96,6 +97,14 @@ def census(
             progress("reading lines", len(found), len(sources))
     store.remember()
     return found
+
+
+def _kept(stored: Any | None) -> Facts | None:
+    """Facts from the cache; what is no record of facts counts as missing."""
+    try:
+        return None if stored is None else Facts.model_validate(stored)
+    except ValidationError:
+        return None
 
 
 def in_order(executor: Executor, work: Callable[[T], R], items: Iterable[T], *, ahead: int = 6) -> Iterator[R]:
@@ -173,6 +182,7 @@ def facts_of(recording: Recording, *, file_id: str, centre_ghz: float) -> Facts:
         direct=direct,
         first_xy=_place(recording, 0),
         last_xy=_place(recording, -1),
+        bend_m=_bend(recording),
         header=_plain(recording.header),
         problems=tuple(p.to_dict() for p in recording.problems),
     )
@@ -243,6 +253,15 @@ def _place(recording: Recording, trace: int) -> tuple[float, float] | None:
     if recording.x is None or recording.y is None:
         return None
     return float(recording.x[trace]), float(recording.y[trace])
+
+
+def _bend(recording: Recording) -> float:
+    """Largest distance of a header position from the straight line between the first and the last, m."""
+    if recording.x is None or recording.y is None or len(recording.x) < 3:
+        return 0.0
+    place = np.asarray(recording.x, float) + 1j * np.asarray(recording.y, float)
+    way = place[-1] - place[0]
+    return float(np.max(np.abs(((place - place[0]) * np.conj(way)).imag)) / abs(way)) if way else 0.0
 
 
 def _plain(header: dict[str, Any]) -> dict[str, Any]:

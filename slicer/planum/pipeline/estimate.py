@@ -41,11 +41,15 @@ SCAN_LINES = 12
 
 @dataclass(frozen=True)
 class Line:
-    """One register row, where its traces are, and the facts of its file."""
+    """One register row, where its traces are, and the facts of its file.
+
+    ``header`` says that the row's start and end were taken from the file's own positions.
+    """
 
     row: RegisterRow
     source: Source
     facts: Facts
+    header: bool = False
 
 
 def time_zero(lines: Sequence[Line], radar: Radar) -> tuple[list[float], Estimate]:

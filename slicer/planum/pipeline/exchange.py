@@ -55,9 +55,9 @@ def check_place(final: Path) -> None:
     Raises
     ------
     MachineError
-        When ``final`` is a file, or a folder with something in it but no ``run.json``.
+        When ``final`` is a file or a link, or a folder with something in it but no ``run.json``.
     """
-    ours = final.is_dir() and ((final / "run.json").is_file() or not any(final.iterdir()))
+    ours = final.is_dir() and not final.is_symlink() and ((final / "run.json").is_file() or not any(final.iterdir()))
     if final.exists() and not ours:
         raise MachineError(
             Problem(

@@ -12,7 +12,7 @@ import numpy as np
 from planum.cube.geometry import line_spacing
 from planum.errors import LineError, Problem, SurveyError
 from planum.lines.reading import read_line
-from planum.pipeline import resolve
+from planum.pipeline.frames import site_frames
 from planum.pipeline.recipe import settings, toml
 from planum.pipeline.run import plan_site, sources_of
 from planum.records import LineEntry
@@ -101,7 +101,7 @@ def outlook(site: Path, *, roots: Sequence[Path] = (), progress: Progress | None
     """
     survey = read_survey(Path(site), roots=roots)
     chosen = settings({"steps": survey.config.recipe.names(), **survey.config.recipe.settings()})
-    resolve.site_frames(survey)  # raises where control points do not fit
+    site_frames(survey)  # raises where control points do not fit
     read, aside, warnings = _read_all(survey, progress)
     if not read:
         raise SurveyError([Problem("no line can be used", do="mend what is wrong with each"), *aside])

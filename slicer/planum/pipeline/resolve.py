@@ -14,7 +14,7 @@ from pydantic import BaseModel
 import planum
 from planum.cube.geometry import cube_geometry, line_direction, place_rows
 from planum.engine.linepass import condition, row_cube
-from planum.errors import FrameError, Problem, SurveyError
+from planum.errors import Problem, SurveyError
 from planum.pipeline.census import in_order
 from planum.pipeline.estimate import (
     SCAN_LINES,
@@ -25,16 +25,16 @@ from planum.pipeline.estimate import (
     set_facts,
     time_zero,
 )
+from planum.pipeline.frames import from_headers, site_frames
 from planum.pipeline.passes import read_pieces
 from planum.pipeline.recipe import resolve_chain, settings
 from planum.pipeline.store import Store
 from planum.records import CubeGeometry, Estimate, Facts, LineEntry, Plan, SetPlan, Similarity, Velocity, key
-from planum.site.place import fit_similarity
 from planum.slices.intervals import intervals
 from planum.survey.config import Radar
 from planum.survey.folder import Survey
 
-__all__ = ["Resolution", "resolve", "site_frames"]
+__all__ = ["Resolution", "check_cells", "resolve"]
 
 MOST_CELLS = 400_000_000
 """Cells of one slice: beyond it grids are not one site, or a coordinate is mistyped."""
@@ -86,8 +86,8 @@ def resolve(
         When the survey cannot be mapped as it stands; every problem found is in it.
     """
     chosen = settings({"steps": survey.config.recipe.names(), **survey.config.recipe.settings()})
-    frames = site_frames(survey)
     warnings: list[Problem] = []
+    lines, frames = from_headers(survey, lines, site_frames(survey), warnings)
     drafts = [_draft(name, group, survey, frames, warnings) for name, group in _sets(lines).items()]
     velocity, curve = _velocity(survey, drafts, chosen, store, executor, warnings, progress)
     first = drafts[0]
@@ -132,36 +132,6 @@ def _sets(lines: Sequence[Line]) -> dict[str, list[Line]]:
     return {
         f"{grid}/{way}" + (f"@{visit}" if many_visits else ""): group for (grid, way, _, visit), group in groups.items()
     }
-
-
-def site_frames(survey: Survey) -> dict[str, Similarity]:
-    """Fit every grid to its own control points, or to the site grid's.
-
-    Raises
-    ------
-    FrameError
-        When points are missing or do not fit.
-    """
-    out = {}
-    for grid in survey.config.grid:
-        own = [c for c in survey.control if c.grid.casefold() == grid.name.casefold()]
-        points = own if len(own) >= 2 else [c for c in survey.control if not c.grid]
-        if not points:
-            if survey.config.survey.crs and grid.positions == "register":
-                raise FrameError(
-                    Problem(
-                        came=f"grid {grid.name} has no control points, and the survey names a crs",
-                        allowed="at least two points with local and map coordinates",
-                        do="add control.csv, or leave out crs to stay in the local frame",
-                        file="control.csv",
-                    )
-                )
-            out[grid.name] = Similarity()
-            continue
-        local = np.array([[c.local_x_m, c.local_y_m] for c in points])
-        mapped = np.array([[c.easting_m, c.northing_m] for c in points])
-        out[grid.name] = fit_similarity([c.point for c in points], local, mapped, grid=grid.name)
-    return out
 
 
 def _draft(
@@ -230,6 +200,7 @@ def _entry(name: str, line: Line, zero: float, gain: float, warnings: list[Probl
         start=row.start,
         end=end,
         part=row.part,
+        header_positions=line.header,
         zero_ns=((0, zero),),
         gain=gain,
         because=tuple(because),
@@ -365,17 +336,30 @@ def _bounds(sets: Sequence[SetPlan], cell: float) -> tuple[float, float, float, 
     e, n = np.concatenate(east), np.concatenate(north)
     low = [math.floor(float(c.min()) / cell - 1e-6) for c in (e, n)]
     high = [math.ceil(float(c.max()) / cell + 1e-6) for c in (e, n)]
-    cells = (high[0] - low[0]) * (high[1] - low[1])
-    if cells > MOST_CELLS:
+    bounds = (low[0] * cell, low[1] * cell, high[0] * cell, high[1] * cell)
+    check_cells(bounds, cell)
+    return bounds
+
+
+def check_cells(bounds: tuple[float, float, float, float], cell_m: float) -> None:
+    """Refuse a raster that no site asks for, before memory is asked for.
+
+    Raises
+    ------
+    SurveyError
+        With more than 400 million cells a slice, or none.
+    """
+    west, south, east, north = bounds
+    wide, tall = (east - west) / cell_m, (north - south) / cell_m
+    if not (round(wide) >= 1 and round(tall) >= 1 and wide * tall <= MOST_CELLS):
         raise SurveyError(
             Problem(
-                came=f"the grids span {high[0] - low[0]} × {high[1] - low[1]} cells of {cell:g} m",
+                came=f"the grids span {wide:.0f} × {tall:.0f} cells of {cell_m:g} m",
                 allowed=f"at most {MOST_CELLS:,} cells",
                 do="look for a mistyped control point, map distant grids as surveys of their own, or raise cell_m",
                 file="control.csv",
             )
         )
-    return (low[0] * cell, low[1] * cell, high[0] * cell, high[1] * cell)
 
 
 def _notes(first: _Draft, sets: Sequence[SetPlan], velocity: Velocity) -> list[str]:

@@ -16,7 +16,8 @@ from pathlib import Path
 from typing import Any
 
 import planum
-from planum.errors import LineError, Problem, SurveyError
+from planum.engine.steps import check_order, get_step
+from planum.errors import LineError, Problem, SurveyError, printable
 from planum.lines.recording import RawLayout, ReadOptions
 from planum.pipeline import exchange
 from planum.pipeline.census import Source, census, in_order
@@ -25,7 +26,7 @@ from planum.pipeline.gridded import grid_stack, open_stack
 from planum.pipeline.passes import row_key, strip_of
 from planum.pipeline.products import section_key, section_picture, write_products
 from planum.pipeline.recipe import toml
-from planum.pipeline.resolve import Resolution, resolve
+from planum.pipeline.resolve import Resolution, check_cells, resolve
 from planum.pipeline.store import Store
 from planum.pipeline.told import RunFacts
 from planum.records import Plan, SetPlan
@@ -154,11 +155,17 @@ def read_run(path: Path) -> tuple[Plan, dict[str, Any]]:
     """
     try:
         record = json.loads(Path(path).read_text(encoding="utf-8"))
-        return Plan.model_validate(record["plan"]), record
+        plan = Plan.model_validate(record["plan"])
+        for s in plan.sets:
+            check_order([step.name for step in s.chain])
+            for step in s.chain:
+                get_step(step.name).Params.model_validate(step.params)
+        check_cells(plan.bounds, plan.cell_m)
+        return plan, record
     except (OSError, ValueError, KeyError, TypeError) as fault:
         raise SurveyError(
             Problem(
-                came=f"no plan can be read ({type(fault).__name__})",
+                came=f"no plan can be read ({printable(str(fault).partition(chr(10))[0], longest=120)})",
                 allowed="the run.json of a run",
                 do="planum map SITE makes one",
                 file=str(path),

@@ -24,6 +24,7 @@ from typing import Any
 
 import numpy as np
 
+from planum.errors import MachineError, Problem
 from planum.outputs.writing import aside
 
 __all__ = ["Store"]
@@ -32,9 +33,20 @@ _TAG = "Signature: 8a477f597d28d172789f06886806bc55\n# Rebuildable files of plan
 
 
 class Store:
-    """One site's ``work/`` folder."""
+    """One site's ``work/`` folder.
+
+    Raises
+    ------
+    MachineError
+        When ``folder`` is a link or a file (a survey folder is not trusted to say where to write), or cannot be
+        written.
+    """
 
     def __init__(self, folder: Path) -> None:
+        if folder.is_symlink() or (folder.exists() and not folder.is_dir()):
+            raise MachineError(
+                Problem(came="work is a link or a file", allowed="a folder", do="remove it", file=str(folder))
+            )
         self.folder = folder
         self._write(folder / "CACHEDIR.TAG", _TAG)
         self._known: dict[str, list[Any]] = self._load(folder / "files.json") or {}
