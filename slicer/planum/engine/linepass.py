@@ -57,7 +57,7 @@ def run_row(pieces: Sequence[Piece], plan: SetPlan, row: int, *, section: bool =
     row : int
         Index on the line axis.
     section : bool
-        Also return pictures of the row, raw, processed and migrated, as uint8 (along, time).
+        Also return pictures of the row, raw, processed and (where it is) migrated, as uint8 (along, time).
 
     Returns
     -------
@@ -69,7 +69,7 @@ def run_row(pieces: Sequence[Piece], plan: SetPlan, row: int, *, section: bool =
     for spec in plan.chain:
         if spec.name in {"migrate", "envelope"} and "processed" not in stages:
             stages["processed"] = cube
-        if spec.name == "envelope":
+        if spec.name == "envelope" and any(s.name == "migrate" for s in plan.chain):
             stages["migrated"] = cube
         cube = get_step(spec.name)(cube, **spec.params)
     means = window_means(cube, plan.windows_ns)

@@ -47,12 +47,14 @@ def get_step(name: str) -> Step:
     """
     steps = find_steps()
     if name not in steps:
-        raise RecipeError(
-            Problem(
-                came=f"there is no step {name!r}", allowed=nearest(name, steps), key="recipe.steps", do="mend the name"
-            )
-        )
+        raise RecipeError(_unknown(name))
     return steps[name]
+
+
+def _unknown(name: str) -> Problem:
+    return Problem(
+        came=f"there is no step {name!r}", allowed=nearest(name, find_steps()), key="recipe.steps", do="mend the name"
+    )
 
 
 def check_order(names: Sequence[str]) -> None:
@@ -61,13 +63,16 @@ def check_order(names: Sequence[str]) -> None:
     Raises
     ------
     RecipeError
-        When a step does not take what the step before it gives, when a step comes twice, or when the last one does
-        not give an envelope.
+        With all mistakes: a step that is not installed, that does not take what the step before it gives or comes
+        twice, and a last one that does not give an envelope.
     """
-    problems = []
+    steps, problems = find_steps(), []
     quantity, before = "voltage", "the recorded traces"
     for name in names:
-        step = get_step(name)
+        if name not in steps:
+            problems.append(_unknown(name))
+            continue
+        step = steps[name]
         if step.takes != quantity:
             problems.append(
                 Problem(
@@ -80,7 +85,7 @@ def check_order(names: Sequence[str]) -> None:
         quantity, before = step.gives, f"{name!r}"
     for name in sorted({n for n in names if list(names).count(n) > 1}):
         problems.append(Problem(came=f"{name!r} comes twice", do="keep one", key="recipe.steps"))
-    if quantity != "envelope":
+    if quantity != "envelope" and not (names and names[-1] not in steps):
         problems.append(
             Problem(
                 came=f"the recipe ends with {quantity}",

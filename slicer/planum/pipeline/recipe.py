@@ -6,13 +6,15 @@ every number.
 
 from __future__ import annotations
 
+import json
+import re
 from collections.abc import Mapping, Sequence
 from dataclasses import replace
 from typing import Any
 
 from pydantic import BaseModel, ValidationError
 
-from planum.engine.steps import check_order, get_step
+from planum.engine.steps import check_order, find_steps, get_step
 from planum.errors import Problem, RecipeError, nearest
 from planum.records import SetFacts, StepSpec
 from planum.survey.config import DEFAULT_STEPS
@@ -38,8 +40,12 @@ def settings(recipe: Mapping[str, Any], *, file: str = "survey.toml") -> dict[st
     """
     names = list(recipe.get("steps") or DEFAULT_STEPS)
     tables = {k: v for k, v in recipe.items() if k != "steps"}
-    check_order(names)
-    problems = [
+    problems: list[Problem] = []
+    try:
+        check_order(names)
+    except RecipeError as fault:
+        problems += fault.problems
+    problems += [
         Problem(
             came=f"settings for {name!r}, which is not among the steps",
             allowed=nearest(name, names),
@@ -51,8 +57,11 @@ def settings(recipe: Mapping[str, Any], *, file: str = "survey.toml") -> dict[st
         if name not in names
     ]
     out: dict[str, BaseModel] = {}
-    for name in names:
-        model = get_step(name).Params
+    installed = find_steps()
+    for name in dict.fromkeys(names):
+        if name not in installed:
+            continue
+        model = installed[name].Params
         try:
             out[name] = model.model_validate(tables.get(name, {}))
         except ValidationError as fault:
@@ -98,11 +107,11 @@ def resolve_chain(
 
 def toml(chain: Sequence[StepSpec]) -> str:
     """Return a resolved chain as the recipe a person can paste into survey.toml; long curves are summarised."""
-    rows = ["[recipe]", f"steps = [{', '.join(repr(s.name).replace(chr(39), chr(34)) for s in chain)}]"]
+    rows = ["[recipe]", f"steps = [{', '.join(json.dumps(s.name) for s in chain)}]"]
     for spec in chain:
         if not spec.params:
             continue
-        rows += ["", f"[recipe.{spec.name}]"]
+        rows += ["", f"[recipe.{_toml_key(spec.name)}]"]
         for name, value in spec.params.items():
             rows.append(_toml_row(name, value))
     return "\n".join(rows) + "\n"
@@ -112,6 +121,10 @@ def settings_text(params: Mapping[str, Any]) -> str:
     """Return a step's settings in one line for people."""
     rows = [_toml_row(name, value) for name, value in params.items() if value is not None]
     return ", ".join(row.removeprefix("# ") for row in rows) or "no settings"
+
+
+def _toml_key(name: str) -> str:
+    return name if re.fullmatch(r"[A-Za-z0-9_-]+", name) else json.dumps(name, ensure_ascii=False)
 
 
 def _toml_row(name: str, value: Any) -> str:
@@ -124,7 +137,7 @@ def _toml_row(name: str, value: Any) -> str:
         return f"{name} = {str(value).lower()}"
     if isinstance(value, (int, float)):
         return f"{name} = {value:.6g}" if isinstance(value, float) else f"{name} = {value}"
-    return f'{name} = "{value}"'
+    return f"{name} = {json.dumps(str(value), ensure_ascii=False)}"  # a JSON string is a TOML string
 
 
 def _shape(value: Any) -> list[int]:
