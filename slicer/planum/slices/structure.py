@@ -15,8 +15,9 @@ __all__ = ["FINE", "best_slices", "coarse", "smoothed", "structure"]
 
 SPACINGS = 1.25
 """Standard deviation of the smoothing in line spacings: more than one, or a stone shared by two lines would pass."""
-HIGH = 0.98
-"""A wall of 60 cm through half of a 20 m grid covers 1.5 % of it; the quantile must see less than that again."""
+HIGH = 0.985
+"""A wall of 60 cm and 10 m on a field of 20 m square covers 1.5 % of it: the part that stands out may be as small.
+A strip along the rim, where the first and last lines often differ, covers more and gains nothing from it."""
 FINE = 2.5
 """Cells per standard deviation that are kept: a Gaussian of 2.5 cells holds nothing a coarser cell would lose."""
 REACH = 3.0
@@ -27,9 +28,9 @@ MOST_BEST = 6
 def structure(plane: np.ndarray, *, spacing: float) -> float:
     """Return how far extended features stand out of one slice, in robust standard deviations.
 
-    The plane is smoothed over 1.25 line spacings; its 0.98 quantile less its median is divided by 1.4826 times the
+    The plane is smoothed over 1.25 line spacings; its 0.985 quantile less its median is divided by 1.4826 times the
     median absolute deviation, which is the standard deviation of a normal distribution (Rousseeuw & Croux 1993, from
-    memory). A plane of smoothed normal noise gives 2.05, the 0.98 quantile of the normal distribution.
+    memory). A plane of smoothed normal noise gives 2.17, the 0.985 quantile of the normal distribution.
 
     Parameters
     ----------
