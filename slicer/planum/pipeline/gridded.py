@@ -20,7 +20,7 @@ from planum.slices.gridding import LineGridder
 
 __all__ = ["grid_stack", "gridded_key", "open_stack"]
 
-GRIDDING_VERSION = 1
+GRIDDING_VERSION = 2
 CELLS_AT_ONCE = 25_000
 """Cells whose weights are held at a time, some 25 MB while they are built."""
 
@@ -181,7 +181,8 @@ def _block(
         for one, weights, mine in parts:
             values[mine] = weights.apply(one.values[k])[mine]
             limited += weights.limited
-            left[mine] = weights.between(one.left_out[k])[mine]
+            # The kernel along a line has negative lobes; a size has no sign.
+            left[mine] = np.maximum(weights.between(one.left_out[k])[mine], 0.0)
         stacks["amplitude"][k, where] = values.reshape(shape)
         stacks["left_out_error"][k, where] = left.reshape(shape)
     return limited
