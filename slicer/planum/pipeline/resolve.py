@@ -350,11 +350,11 @@ def check_cells(bounds: tuple[float, float, float, float], cell_m: float) -> Non
         With more than 400 million cells a slice, or none.
     """
     west, south, east, north = bounds
-    wide, tall = (east - west) / cell_m, (north - south) / cell_m
-    if not (round(wide) >= 1 and round(tall) >= 1 and wide * tall <= MOST_CELLS):
+    wide, tall = round((east - west) / cell_m), round((north - south) / cell_m)
+    if not (wide >= 1 and tall >= 1 and wide * tall <= MOST_CELLS):
         raise SurveyError(
             Problem(
-                came=f"the grids span {wide:.0f} × {tall:.0f} cells of {cell_m:g} m",
+                came=f"the grids span {wide} × {tall} cells of {cell_m:g} m",
                 allowed=f"at most {MOST_CELLS:,} cells",
                 do="look for a mistyped control point, map distant grids as surveys of their own, or raise cell_m",
                 file="control.csv",
