@@ -8,7 +8,7 @@ import pytest
 from planum import schema
 from planum.errors import EvidenceError
 from planum.evidence.focus import focus_scan
-from planum.records import FLAG_NONE
+from planum.records import FLAG_DEAD, FLAG_NONE
 
 ALONG, TIME = np.arange(0.0, 6.0, 0.04), -2.0 + 0.2 * np.arange(200)
 SEPARATION = 0.16
@@ -125,6 +125,20 @@ def test_gaps_and_missing_rows_do_not_vote(true_cube, scanned):
     estimate, _ = focus_scan([holed])
     assert "4 lines" in estimate.evidence
     assert estimate.value == pytest.approx(scanned[0].value, rel=0.005)
+
+
+def test_dead_traces_do_not_vote(true_cube):
+    """A run of dead traces is left out like a gap: the same votes to the last digit."""
+    found = []
+    for kind in (FLAG_NONE, FLAG_DEAD):
+        flag = np.zeros((4, ALONG.size), np.uint8)
+        flag[0, 60:85] = kind
+        flag[3] = kind
+        data = true_cube.values.copy()
+        data[0, 60:85] = 0.0
+        found.append(focus_scan([schema.cube(data, line=0.5 * np.arange(4), along=ALONG, time=TIME, flag=flag)])[0])
+    assert found[0] == found[1]
+    assert "3 lines" in found[1].evidence
 
 
 def test_long_strong_tails_do_not_outvote_the_foci():

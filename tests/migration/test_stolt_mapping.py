@@ -22,7 +22,7 @@ from planum.migration.stolt import (
     stolt_map,
     stolt_table,
 )
-from planum.records import FLAG_CLIPPED, FLAG_NONE, FLAG_RIM
+from planum.records import FLAG_CLIPPED, FLAG_DEAD, FLAG_FILLED, FLAG_NONE, FLAG_RIM
 
 ALONG, TIME = np.arange(0.0, 4.0, 0.05), -1.0 + 0.2 * np.arange(160)
 
@@ -157,6 +157,33 @@ def test_what_stands_in_a_gap_is_not_data(models):
     assert np.array_equal(quiet, shouted)
     assert not quiet[30:36].any()
     assert quiet[29].any()
+
+
+def test_dead_traces_are_a_gap_and_filled_ones_are_not(models):
+    """A run of dead traces holds 0: without a fade beside it, its edges smear like those of any gap."""
+    flag, gap = np.zeros((2, 1, ALONG.size), np.uint8)
+    flag[0, 30:50], gap[0, 30:50] = FLAG_DEAD, FLAG_NONE
+    data = noise((80, 160))
+    dead, missing = (stolt(models.cube(data, ALONG, TIME, f), velocity_m_per_ns=0.1).values for f in (flag, gap))
+    assert np.array_equal(dead, missing)
+    assert not dead[0, 30:50].any()
+    assert edge_weights(flag[0], taper=3.0).tolist() == edge_weights(gap[0], taper=3.0).tolist()
+    assert edge_weights(np.full(20, FLAG_FILLED, np.uint8), taper=0.0).tolist() == [1.0] * 20
+    rim = mark_rim(flag, trace_spacing_m=0.05, reach_m=0.12)[0]
+    assert (rim[28:52] == [FLAG_RIM] * 2 + [FLAG_DEAD] * 20 + [FLAG_RIM] * 2).all()
+
+
+def test_twenty_dead_traces_under_a_flat_layer_make_little_above_it(models):
+    """Energy above the layer beside the run: a hard edge makes a seventh of the layer's amplitude out of nothing."""
+    along, time = 0.05 * np.arange(160), -2.0 + 0.2 * np.arange(240)
+    layer = models.plane(along, time, depth_at_0=1.0, dip_deg=0.0)
+    flag = np.zeros((1, along.size), np.uint8)
+    flag[0, 70:90] = FLAG_DEAD
+    layer[70:90] = 0.0
+    image = models.envelope(stolt(models.cube(layer, along, time, flag), velocity_m_per_ns=0.1).values[0])
+    above = image[50:110][:, (time > 2.0) & (time < 17.0)].max()
+    # found 0.040, as at a gap (the intact layer: 0.011, its ends); a hard edge gives 0.141
+    assert above < 0.06 * image[20:60].max()
 
 
 def test_row_without_any_recording_stays_empty(models):

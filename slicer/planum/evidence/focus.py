@@ -29,7 +29,7 @@ from scipy.signal import find_peaks
 from planum.constants import VELOCITY_RANGE
 from planum.errors import EvidenceError, Problem
 from planum.migration.stolt import edge_weights, stolt_analytic, stolt_table
-from planum.records import FLAG_NONE, Estimate
+from planum.records import FLAG_DEAD, FLAG_NONE, Estimate
 from planum.schema import check_cube, regular_step
 
 __all__ = ["FocusCurve", "focus_scan"]
@@ -87,7 +87,7 @@ def focus_scan(
         Ratio of one velocity to the next, less one; 0.02 at most.
     patch_m, patch_ns : float
         Size of a patch; patches overlap by half. The direct wave's zone, two and a half periods of the mean frequency
-        from time zero, empty patches and patches over gaps are left out.
+        from time zero, empty patches and patches over gaps or dead traces are left out.
     allowance : (float, float)
         1-sigma error of time zero, ns, and of the odometer, as a ratio.
 
@@ -161,13 +161,14 @@ def _scan(section: xr.DataArray, velocities: np.ndarray, *, patch: tuple[float, 
     half = (max(round(patch[0] / dx / 2.0), 1), max(round(patch[1] / dt / 2.0), 1))
     data = np.asarray(section.values, np.float32)
     flags = section.coords["flag"].values if "flag" in section.coords else np.zeros(data.shape[:2], np.uint8)
-    kept = [i for i in range(len(data)) if np.any(data[i]) and not np.all(flags[i] & FLAG_NONE)]
+    gaps = (flags & (FLAG_NONE | FLAG_DEAD)) != 0
+    kept = [i for i in range(len(data)) if np.any(data[i]) and not gaps[i].all()]
     if not kept:
         return
     mean_ghz, highest_ghz = _band(data[kept], dt)
     start = int(np.searchsorted(time, DIRECT_PERIODS / mean_ghz))
     tapered = [data[i] * edge_weights(flags[i], taper=EDGE_M / dx)[:, None] for i in kept]
-    whole = [_patches(((flags[i] & FLAG_NONE) == 0)[:, None].repeat(time.size - start, 1), half) == 1.0 for i in kept]
+    whole = [_patches((~gaps[i])[:, None].repeat(time.size - start, 1), half) == 1.0 for i in kept]
     if not whole[0].size:
         return
     curves = np.empty((len(kept), velocities.size, *whole[0].shape), np.float32)

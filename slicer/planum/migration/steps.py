@@ -31,7 +31,7 @@ class Migrate:
     """Constant-velocity migration, line by line; see :func:`planum.migration.stolt.stolt`."""
 
     name = "migrate"
-    version = 1
+    version = 2
     reach: Literal["trace", "line", "set"] = "line"
     takes: Quantity = "voltage"
     gives: Quantity = "voltage"

@@ -29,7 +29,7 @@ from scipy import fft, sparse, special
 
 from planum.constants import VELOCITY_RANGE
 from planum.errors import Problem, RecipeError
-from planum.records import FLAG_NONE, FLAG_RIM
+from planum.records import FLAG_DEAD, FLAG_NONE, FLAG_RIM
 from planum.schema import regular_step
 
 __all__ = [
@@ -48,6 +48,9 @@ __all__ = [
 TAPS = 6
 OVERSAMPLING = 1.25
 MAX_DIP_DEG, DIP_TAPER_DEG, EDGE_TAPER_M = 65.0, 15.0, 0.2
+
+_EMPTY = FLAG_NONE | FLAG_DEAD
+"""Nothing to migrate: a run of dead traces is as sharp an edge as a stretch without a recording."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -108,12 +111,12 @@ def rim_m(depth_m: Any, *, dip_deg: float = 45.0) -> Any:
 def mark_rim(flag: np.ndarray, *, trace_spacing_m: float, reach_m: float) -> np.ndarray:
     """Return ``flag`` (..., along) with FLAG_RIM set where a line end or a gap is nearer than ``reach_m``.
 
-    Places without a recording are left as they are.
+    Places without a recording and dead ones are gaps, and are left as they are.
     """
     flag = np.asarray(flag)
     rows = flag.reshape(-1, flag.shape[-1])
-    rim = np.stack([_gap_distance((r & FLAG_NONE) != 0) * trace_spacing_m < reach_m for r in rows]).reshape(flag.shape)
-    return np.where(rim & ((flag & FLAG_NONE) == 0), flag | FLAG_RIM, flag).astype(flag.dtype)
+    rim = np.stack([_gap_distance((r & _EMPTY) != 0) * trace_spacing_m < reach_m for r in rows]).reshape(flag.shape)
+    return np.where(rim & ((flag & _EMPTY) == 0), flag | FLAG_RIM, flag).astype(flag.dtype)
 
 
 def stolt(
@@ -145,7 +148,8 @@ def stolt(
     Returns
     -------
     DataArray
-        Voltage, float32, same axes; ``time`` is migrated two-way time. Places without a recording hold 0.
+        Voltage, float32, same axes; ``time`` is migrated two-way time. Places without a recording and dead ones hold
+        0.
 
     Raises
     ------
@@ -336,8 +340,11 @@ def _fade(value: np.ndarray, start: float, stop: float) -> np.ndarray:
 
 
 def edge_weights(flag: np.ndarray, *, taper: float) -> np.ndarray:
-    """Return the weight (along) of each trace: 0 in gaps, rising over ``taper`` traces from line ends and gaps."""
-    gap = (np.asarray(flag) & FLAG_NONE) != 0
+    """Return the weight (along) of each trace: 0 in gaps, rising over ``taper`` traces from line ends and gaps.
+
+    A gap is a place without a recording or with a dead trace; filled traces are data.
+    """
+    gap = (np.asarray(flag) & _EMPTY) != 0
     if taper <= 0:
         return (~gap).astype(np.float32)
     distance = np.minimum(_gap_distance(gap) / (taper + 1.0), 1.0)
@@ -345,7 +352,7 @@ def edge_weights(flag: np.ndarray, *, taper: float) -> np.ndarray:
 
 
 def _gap_distance(gap: np.ndarray) -> np.ndarray:
-    """Return the distance in traces to the nearest place without a recording; beyond both ends there is none."""
+    """Return the distance in traces to the nearest place of a gap; beyond both ends there is none."""
     bounds = np.flatnonzero(np.concatenate([[True], gap, [True]])) - 1
     at = np.arange(gap.size)
     after = bounds[np.searchsorted(bounds, at)]
@@ -368,7 +375,7 @@ def _migrate_block(
     out = np.zeros(data.shape, np.float32)
     flags = np.broadcast_to(flag, data.shape[:-1])
     for at in np.ndindex(data.shape[:-2]):
-        gap = (flags[at] & FLAG_NONE) != 0
+        gap = (flags[at] & _EMPTY) != 0
         if gap.all():
             continue
         weight = edge_weights(flags[at], taper=edge)
