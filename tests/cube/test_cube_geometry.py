@@ -163,3 +163,56 @@ def test_a_step_that_is_not_positive_is_refused():
 def test_a_set_without_lengths_has_no_trace_spacing():
     with pytest.raises(SurveyError, match="no line with two traces"):
         geometry.trace_spacing([entry("0", (0.0, 0.0), (1.0, 0.0), traces=1)])
+
+
+def test_spacing_bears_neighbours_that_are_both_a_little_off():
+    """Two lines near a tenth off in opposite ways: their distance is 0.12 to 0.135 off, within the fifth promised."""
+    across = [0.0, 0.95, 2.07, 4.0, 6.0, 8.0]
+    g = geometry.cube_geometry(lines(across), **TIME)
+    placed, _ = geometry.place_rows(lines(across), g)
+    assert [e.row for e in placed] == [0, 1, 2, 4, 6, 8]
+
+
+def test_spacing_does_not_bear_more_than_a_fifth():
+    """Distances 1, 1, 1.25: a quarter off a step of 1, half off 1/2, a quarter off 1/3; the median is left, refined."""
+    fitted = np.polyfit([0, 1, 2, 3], [0.0, 1.0, 2.0, 3.25], 1)[0]
+    assert geometry.line_spacing(lines([0.0, 1.0, 2.0, 3.25]), direction="x") == pytest.approx(fitted, abs=1e-6)
+    assert not geometry._fits(np.array([1.0, 1.0, 1.25]), 1.0)
+    assert geometry._fits(np.array([1.0, 1.0, 1.19]), 1.0)
+
+
+def test_moving_lines_onto_rows_is_said_once():
+    """3 cm and 2 cm off at 0.5 m: under a tenth each, so one note that names the larger; 1 cm is the tape's own."""
+    off = lines([0.0, 0.53, 1.0, 1.48, 2.0])
+    g = geometry.cube_geometry(off, line_step_m=0.5, **TIME)
+    _, problems = geometry.place_rows(off, g)
+    assert [p.severity for p in problems] == ["note"]
+    assert "rows 0.5 m apart, moved by up to 0.030 m (line 1)" in str(problems[0])
+    tape = lines([0.0, 0.51, 1.0, 1.49, 2.0])
+    assert geometry.place_rows(tape, geometry.cube_geometry(tape, line_step_m=0.5, **TIME))[1] == ()
+
+
+@pytest.mark.parametrize(
+    ("across", "along", "asked"),
+    [
+        ([0, 25, 50], (0.0, 20.0), ["lines"]),  # spacing typed in cm
+        ([0, 0.5, 1.0], (0.0, 2000.0), ["traces"]),  # length typed in cm
+        ([0, 50, 100], (0.0, 2000.0), ["lines", "traces"]),
+        ([0, 5, 10], (0.0, 100.0), []),  # at the limits
+    ],
+)
+def test_a_register_that_is_hardly_in_metres_is_asked_about(across, along, asked):
+    some = lines(across, along=along)
+    _, problems = geometry.place_rows(some, geometry.cube_geometry(some, **TIME))
+    assert [p.severity for p in problems] == ["warning"] * len(asked)
+    for name, problem in zip(asked, problems, strict=True):
+        assert f"the {name} of grid A are" in str(problem)
+        assert "is the register in metres?" in str(problem)
+
+
+@pytest.mark.parametrize("step", [1e-7, 0.009, 10.1])
+def test_a_typed_trace_spacing_the_recordings_do_not_bear_is_refused(step):
+    """Recorded at 0.1 m on 10 m: ten places per trace is the most, one line the longest."""
+    with pytest.raises(SurveyError, match=r"trace_spacing_m is .*0\.01 to 10 m: .* recorded 0\.1 m apart"):
+        geometry.cube_geometry(lines([0, 0.5]), along_step_m=step, **TIME)
+    assert geometry.cube_geometry(lines([0, 0.5]), along_step_m=0.01, **TIME).n_along == 1001

@@ -36,6 +36,19 @@ _SAME_M = 0.01
 _OFF_ROW = 0.1
 """Share of the line spacing by which a line may miss its row before it is reported."""
 
+_OFF_GAP = 2 * _OFF_ROW
+"""The same for the distance of two neighbours: both may miss their rows, in opposite ways."""
+
+_TOLD_M = 0.01
+"""Lines moved onto their rows by more than this are told: field tapes are read to the centimetre."""
+
+_FAR_LINES_M, _FAR_TRACES_M = 5.0, 1.0
+"""Spacings beyond which a survey of archaeology is more likely written in other units (common practice: 0.25 to 1 m
+between lines, 1 to 10 cm between traces)."""
+
+_FINER = 10.0
+"""Most places on the along axis per recorded trace: between traces there is nothing to find, only memory to fill."""
+
 
 def line_direction(start: Sequence[float], end: Sequence[float]) -> Direction | None:
     """Return the local axis a straight line runs along, or None when it is oblique.
@@ -92,9 +105,10 @@ def set_direction(entries: Sequence[LineEntry]) -> Direction:
 def line_spacing(entries: Sequence[LineEntry], *, direction: Direction) -> float:
     """Return the nominal line spacing in m.
 
-    The widest step of which all distances between neighbouring lines are whole multiples within a tenth (so that any
-    number of missing lines does not matter), refined by a straight fit of position against row, because tapes read to
-    the centimetre cannot hold a third of a metre. Lines on no common step get the median distance. A single line
+    The widest step of which the distances between neighbouring lines, one in ten excepted, are whole multiples within
+    a fifth of it: each line may be a tenth off its place, and any number may be missing. It is refined by a straight
+    fit of position against row, because tapes read to the centimetre cannot hold a third of a metre. Lines on no common
+    step get the median distance. A single line
     returns :data:`ALONE_M`.
     """
     across = _distinct([_across(e, direction) for e in entries])
@@ -108,14 +122,14 @@ def line_spacing(entries: Sequence[LineEntry], *, direction: Direction) -> float
 
 
 def _smallest(gaps: np.ndarray) -> float:
-    """Mean of the gaps within a tenth of the smallest: one line a little off its place does not set the spacing."""
-    return float(gaps[gaps <= 1.2 * gaps.min()].mean())
+    """Mean of the gaps within a fifth of the smallest: one line a little off its place does not set the spacing."""
+    return float(gaps[gaps <= (1.0 + _OFF_GAP) * gaps.min()].mean())
 
 
 def _fits(gaps: np.ndarray, step: float) -> bool:
-    """Whether every gap is a whole multiple of ``step`` within a tenth of it, one line in ten excepted."""
+    """Whether every gap is a whole multiple of ``step`` within a fifth of it, one gap in ten excepted."""
     rows = gaps / step
-    return bool(np.mean(np.abs(rows - np.round(rows)) <= 2 * _OFF_ROW) >= 0.9 and rows.min() > 0.5)
+    return bool(np.mean(np.abs(rows - np.round(rows)) <= _OFF_GAP) >= 0.9 and rows.min() > 0.5)
 
 
 def trace_spacing(entries: Sequence[LineEntry]) -> float:
@@ -175,7 +189,8 @@ def cube_geometry(
     Raises
     ------
     SurveyError
-        For oblique or mixed lines, or a step that is not positive.
+        For oblique or mixed lines, a step that is not positive, or an along step that is finer than a tenth of the
+        recorded trace spacing or longer than every line.
     """
     way = set_direction(entries) if direction is None else direction
     step = line_spacing(entries, direction=way) if line_step_m is None else line_step_m
@@ -183,6 +198,8 @@ def cube_geometry(
     for name, value in (("line_step_m", step), ("along_step_m", along_step), ("time_step_ns", time_step_ns)):
         if not (math.isfinite(value) and value > 0):
             raise SurveyError(Problem(f"{name} is {value:g}", allowed="a positive number", key=name))
+    if along_step_m is not None:
+        _check_along(entries, along_step_m)
     across = np.array([_across(e, way) for e in entries])
     first = float(across.min())
     rows = np.round((across - first) / step)
@@ -206,20 +223,38 @@ def cube_geometry(
     )
 
 
+def _check_along(entries: Sequence[LineEntry], step: float) -> None:
+    """Refuse a typed step along the lines that the recordings do not bear."""
+    recorded = trace_spacing(entries)
+    longest = max(math.dist(e.start, e.end) * e.along_scale for e in entries)
+    if not recorded / _FINER <= step <= longest:
+        raise SurveyError(
+            Problem(
+                f"trace_spacing_m is {step:g}",
+                allowed=f"{recorded / _FINER:.2g} to {longest:g} m: the traces were recorded {recorded:.3g} m apart",
+                do="correct it, or leave it out",
+                key="grid.trace_spacing_m",
+            )
+        )
+
+
 def place_rows(
     entries: Sequence[LineEntry], geometry: CubeGeometry
 ) -> tuple[tuple[LineEntry, ...], tuple[Problem, ...]]:
-    """Return the entries with their ``row`` set, and a warning for every line more than 0.1 spacing off its row.
+    """Return the entries with their ``row`` set, and what is worth telling.
 
-    The row is the nearest one to the middle of the line; both ends count for the warning. Rows without an entry
-    simply stay empty.
+    The row is the nearest one to the middle of the line; rows without an entry simply stay empty. Each line with an end
+    more than a tenth of the spacing off its row is warned about; of the others, one note tells the largest offset when
+    it is more than a centimetre. A spacing so wide that the register may not be in metres is warned about.
 
     Raises
     ------
     SurveyError
         When a line lies outside the geometry's rows, or two lines cover the same stretch of one row.
     """
-    placed, problems, outside = [], [], []
+    placed, outside = [], []
+    problems = _in_metres(entries, geometry)
+    moved, moved_line = 0.0, ""
     for e in entries:
         row = round((_across(e, geometry.direction) - geometry.line0_m) / geometry.line_step_m)
         if not 0 <= row < geometry.n_lines:
@@ -246,11 +281,33 @@ def place_rows(
                     severity="warning",
                 )
             )
+        elif off > moved:
+            moved, moved_line = off, e.line
         placed.append(e if e.row == row else e.model_copy(update={"row": row}))
     outside += _doubled(placed, geometry)
     if outside:
         raise SurveyError(outside)
+    if moved > _TOLD_M + 1e-9:
+        came = f"grid {entries[0].grid}: lines are put on rows {geometry.line_step_m:g} m apart, moved by up to"
+        problems.append(Problem(f"{came} {moved:.3f} m (line {moved_line})", severity="note"))
     return tuple(placed), tuple(problems)
+
+
+def _in_metres(entries: Sequence[LineEntry], geometry: CubeGeometry) -> list[Problem]:
+    """Ask for the unit where lines or traces lie wider apart than archaeology records them."""
+    wide = [("lines", geometry.line_step_m, _FAR_LINES_M)]
+    if any(e.last_trace > e.first_trace and e.start != e.end for e in entries):
+        wide.append(("traces", trace_spacing(entries), _FAR_TRACES_M))
+    return [
+        Problem(
+            f"the {name} of grid {entries[0].grid} are {step:.4g} m apart: is the register in metres?",
+            allowed=f"usual are less than {most:g} m",
+            do="check the unit of starts and ends, unless it was meant",
+            severity="warning",
+        )
+        for name, step, most in wide
+        if step > most
+    ]
 
 
 def _doubled(entries: Sequence[LineEntry], geometry: CubeGeometry) -> list[Problem]:
