@@ -306,6 +306,45 @@ def test_view_of_a_number_out_of_range_is_wrong_usage(
     assert "level 9 is above" in done.stderr
 
 
+@pytest.fixture
+def drawn(ring: xr.Dataset, monkeypatch: pytest.MonkeyPatch) -> list[object]:
+    """Return the scenes that reach the drawing, which does not happen: a ring wall at 0.05 to 1.45 m."""
+    scenes: list[object] = []
+    monkeypatch.setattr("planum.viewer.load.load_run", lambda _: (ring, ()))
+    monkeypatch.setattr("planum.scene.probe.rendering_problem", lambda: None)
+    monkeypatch.setattr("planum.scene.picture.render", lambda scene, _: scenes.append(scene))
+    return scenes
+
+
+def test_view_refuses_a_depth_outside_the_slices(tmp_path: Path, drawn: list[object]) -> None:
+    """Nothing is drawn, and the range is named."""
+    done = run("view", tmp_path, "--picture", tmp_path / "a.png", "--depth", "99")
+    assert done.exit_code == 2
+    assert "no slice at 99 m; the slices reach from 0.05 to 1.45 m" in done.stderr
+    assert drawn == []
+
+
+@pytest.mark.parametrize("level", ["99", "-5"])
+def test_view_says_when_no_isosurface_is_drawn(tmp_path: Path, drawn: list[object], level: str) -> None:
+    """A level nothing reaches is no mistake; the slice is drawn, and it is said."""
+    done = run("view", tmp_path, "--picture", tmp_path / "a.png", "--level", level)
+    assert done.exit_code == 0, done.stderr
+    assert "no isosurface is drawn" in done.stderr
+    assert len(drawn) == 1
+    done = run("view", tmp_path, "--picture", tmp_path / "a.png", "--level", "0.5")
+    assert "no isosurface" not in done.stderr
+
+
+def test_view_says_in_front_of_the_window_when_no_isosurface_is_drawn(
+    tmp_path: Path, opened: dict[str, object]
+) -> None:
+    """The one amplitude there is 1."""
+    assert (
+        "no isosurface is drawn at 3.5: amplitudes reach from 1 to 1" in run("view", tmp_path, "--level", "3.5").stderr
+    )
+    assert "no isosurface" not in run("view", tmp_path, "--level", "1").stderr
+
+
 def test_view_says_which_package_is_missing(
     tmp_path: Path, opened: dict[str, object], monkeypatch: pytest.MonkeyPatch
 ) -> None:

@@ -122,6 +122,13 @@ def test_impossible_numbers_are_refused(ring: xr.Dataset, options: dict[str, flo
         build_scene(ring, **options)
 
 
+@pytest.mark.parametrize("depth", [99.0, -0.1, 1.46, np.nan])
+def test_a_depth_outside_the_slices_is_refused_with_their_range(ring: xr.Dataset, depth: float) -> None:
+    with pytest.raises(ValueError, match=r"no slice at .* m; the slices reach from 0\.05 to 1\.45 m"):
+        build_scene(ring, slice_depth=depth)
+    assert (build_scene(ring, slice_depth=0.05).index, build_scene(ring, slice_depth=1.45).index) == (0, 13)
+
+
 def test_axis_labels_stand_at_their_places() -> None:
     frame = frame_of((2.0, 14.0, 0.0, 6.0, -1.5, 0.0), origin=(512_300.0, 0.0), exaggeration=1.0)
     texts = {label.text: label.at for label in frame.labels}

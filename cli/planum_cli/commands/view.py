@@ -50,20 +50,27 @@ def command(talk: Talk, site: Path, name: str | None, picture: Path | None, **re
         if picture is None:
             from planum.viewer.window import open_window
 
+            if (level := chosen["level"]) is not None:
+                known = slices["amplitude"]
+                low, high = float(known.min()), float(known.max())
+                if not low <= level <= high:
+                    talk.say(f"no isosurface is drawn at {level:g}: amplitudes reach from {low:.4g} to {high:.4g}")
             try:
                 open_window(slices, lines, statements=statements_of(slices), **chosen)
             except ValueError as wrong:
                 raise _as_usage(wrong) from wrong
             talk.next(f"planum view {quoted(site)} --picture FILE.png   keeps a picture")
             return 0
-        _draw(slices, lines, picture, chosen)
+        _draw(talk, slices, lines, picture, chosen)
     talk.result(str(picture))
     talk.next(f"planum view {quoted(site)}   opens a window where there is a screen")
     return 0
 
 
-def _draw(slices: Any, lines: Any, picture: Path, chosen: dict[str, float | None]) -> None:
+def _draw(talk: Talk, slices: Any, lines: Any, picture: Path, chosen: dict[str, float | None]) -> None:
     """Draw off screen, after asking in another process whether the drawing library works here."""
+    import numpy as np
+
     from planum.errors import MachineError
     from planum.scene.build import build_scene
     from planum.scene.picture import render
@@ -76,6 +83,9 @@ def _draw(slices: Any, lines: Any, picture: Path, chosen: dict[str, float | None
         scene = build_scene(slices, lines=lines, **chosen)
     except ValueError as wrong:
         raise _as_usage(wrong) from wrong
+    if not scene.isosurface.n_cells:
+        low, high = np.nanmin(scene.soft.amplitude), np.nanmax(scene.soft.amplitude)
+        talk.say(f"no isosurface is drawn: {scene.level_text()}; the smoothed slices hold {low:.4g} to {high:.4g}")
     render(scene, picture)
 
 

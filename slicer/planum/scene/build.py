@@ -159,7 +159,7 @@ def build_scene(
         exaggeration = _exaggeration(block)
     if not (np.isfinite(level) and np.isfinite(exaggeration) and exaggeration > 0):
         raise ValueError(f"level and exaggeration must be finite, exaggeration above 0; got {level}, {exaggeration}")
-    index = _foot(scores) if slice_depth is None else int(np.argmin(np.abs(block.depth - slice_depth)))
+    index = _foot(scores) if slice_depth is None else _at_depth(block, slice_depth)
     low, high = (float(q) for q in np.quantile(known, STRETCH))
     return Scene(
         title=str(slices.attrs.get("title", "")),
@@ -177,6 +177,14 @@ def build_scene(
         stretch=(low, high if high > low else low + 1.0),
         exaggeration=exaggeration,
     )
+
+
+def _at_depth(block: Block, depth_m: float) -> int:
+    """Return the slice nearest to a depth that lies in the block."""
+    top, bottom = float(block.bounds_m.min()), float(block.bounds_m.max())
+    if not top - 5e-4 <= depth_m <= bottom + 5e-4:  # half a millimetre only covers float32 files
+        raise ValueError(f"there is no slice at {depth_m:g} m; the slices reach from {top:g} to {bottom:g} m")
+    return int(np.argmin(np.abs(block.depth - depth_m)))
 
 
 def _plain(value: float) -> str:
