@@ -20,7 +20,7 @@ from planum.lines.segy_write import write_segy
 from planum.pipeline import census as census_module
 from planum.pipeline.census import Source, census, facts_of, in_order
 from planum.pipeline.store import Store
-from planum.records import Facts
+from planum.records import FLAG_DEAD, Facts
 from planum.synthetic.folder import passes, record
 from planum.synthetic.modelling import Aerial, Ground, ricker
 from planum.synthetic.ready import one_page, quiet_wall
@@ -117,6 +117,42 @@ def test_float_data_are_never_clipped_and_nan_traces_are_dead() -> None:
     assert found.clipped == ()
     assert found.typical == clean.typical
     assert found.noise == clean.noise
+
+
+@pytest.mark.parametrize("value", [1e30, float("inf"), 1e5])
+def test_a_broken_sample_changes_no_fact_but_the_count_of_dead(value: float) -> None:
+    """One sample of one trace, anywhere from 100 times the rest to infinity: the facts are those without the trace."""
+    rng = np.random.default_rng(2)
+    data = rng.standard_normal((60, 160)).astype(np.float32)
+    clean = facts(np.delete(data, 5, axis=0))
+    data[5, 77] = value
+    found = facts(data)
+    assert found.dead == (5,)
+    alike = {"n_traces", "dead", "problems"}
+    assert found.model_dump(exclude=alike) == clean.model_dump(exclude=alike)
+    if np.isfinite(value):
+        assert "1 trace(s) hold samples over a hundred times beyond all others, first in trace 5" in str(found.problems)
+
+
+def test_a_loud_trace_moves_no_curve() -> None:
+    """Fifty times the rest is still called live; medians over the traces hardly see it."""
+    rng = np.random.default_rng(2)
+    data = (rng.standard_normal((60, 160)) + 30.0 * ricker(STEP_NS * np.arange(160) - 6.0, 0.4)).astype(np.float32)
+    clean, loud = facts(data), facts(np.concatenate([data[:-1], 50.0 * data[-1:]]))
+    assert loud.dead == ()
+    for name in ("spectrum", "envelope"):
+        a, b = (np.array(getattr(f, name)) for f in (clean, loud))
+        # One trace of 60 moves a median by at most one rank: the rms of such steps is below 5 % of the level; a mean
+        # would move by 50 / 60 of it.
+        assert np.sqrt(np.mean((a - b) ** 2)) < 0.05 * np.median(a), name
+
+
+def test_traces_the_recorder_called_dead_are_dead() -> None:
+    """The reader's flag counts, though the trace holds numbers."""
+    data = np.random.default_rng(2).standard_normal((60, 160)).astype(np.float32)
+    flag = np.zeros(60, np.uint8)
+    flag[[3, 9]] = FLAG_DEAD
+    assert facts_of(replace(recording(data), flag=flag), file_id="f", centre_ghz=0.4).dead == (3, 9)
 
 
 def test_clipped_direct_wave_is_noticed() -> None:

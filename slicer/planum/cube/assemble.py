@@ -14,6 +14,7 @@ from typing import NamedTuple
 
 import numpy as np
 import xarray as xr
+from scipy.ndimage import median_filter
 
 from planum import schema
 from planum.cube import resample
@@ -27,13 +28,19 @@ from planum.records import (
     LineEntry,
 )
 
-__all__ = ["Piece", "Row", "assemble", "assemble_row", "trace_flags", "trace_positions"]
+__all__ = ["Piece", "Row", "assemble", "assemble_row", "dead_traces", "trace_flags", "trace_positions", "wild_traces"]
 
 FILL_TRACES = 3
 """A run of at most this many dead traces is filled from its two neighbours (it is shorter than the footprint)."""
 
 _FLAT = 3
 """Equal samples in a row at a record's largest value that make a trace clipped."""
+
+_WILD, _BEYOND = 100.0, 1e6
+"""40 dB above the usual trace and above what lies around it: a broken sample, not a reflector, which many traces see.
+120 dB above the usual trace is beyond any receiver, however many traces hold it."""
+_AROUND = 11
+"""Traces whose median tells what lies around one: a broken run under half as long does not hide itself."""
 
 
 class Piece(NamedTuple):
@@ -74,8 +81,44 @@ def trace_positions(entry: LineEntry) -> tuple[np.ndarray, np.ndarray]:
     return place[:, 0], place[:, 1]
 
 
+def wild_traces(data: np.ndarray) -> np.ndarray:
+    """Return which traces (trace, sample) swing so far beyond the others that they hold broken samples, (trace) bool.
+
+    The swing is a trace's largest less its smallest sample, so an offset does not matter. The usual swing is the
+    recording's upper quartile: up to a quarter of the traces may be wild, up to three quarters nearly silent. Constant
+    and non-finite traces are not called wild, nor is a recording's only trace.
+    """
+    wild = np.zeros(data.shape[0], bool)
+    if data.shape[1] == 0:
+        return wild
+    with np.errstate(invalid="ignore", over="ignore"):
+        high, low = data.max(axis=1).astype(np.float64), data.min(axis=1).astype(np.float64)
+        swing = high / 2.0 - low / 2.0  # half of it: the whole might overflow
+    live = np.isfinite(swing) & (swing > 0)
+    if not live.any():
+        return wild
+    mine = swing[live]
+    usual = float(np.quantile(mine, 0.75, method="lower"))
+    around = median_filter(mine, _AROUND, mode="mirror") if mine.size >= _AROUND else usual
+    wild[live] = (
+        (mine / _WILD > np.maximum(usual, around))
+        | (mine / _BEYOND > usual)
+        | (mine > np.finfo(np.float32).max)  # what the cube cannot hold
+    )
+    return wild
+
+
+def dead_traces(data: np.ndarray) -> np.ndarray:
+    """Return which traces (trace, sample) are constant, not finite or wild, (trace) bool."""
+    if data.shape[1] == 0:
+        return np.ones(data.shape[0], bool)
+    with np.errstate(invalid="ignore"):
+        high, low = data.max(axis=1), data.min(axis=1)
+    return ~(np.isfinite(high) & np.isfinite(low)) | (high == low) | wild_traces(data)
+
+
 def trace_flags(data: np.ndarray) -> np.ndarray:
-    """Return FLAG_DEAD for constant or non-finite traces, FLAG_CLIPPED for those with a flat top.
+    """Return FLAG_DEAD for constant, non-finite or wild traces, FLAG_CLIPPED for those with a flat top.
 
     A flat top is three or more equal samples in a row at the recording's largest or smallest value: a wave does not
     rest there. Recordings that never leave ±16 counts are too coarsely quantised to tell.
@@ -83,11 +126,10 @@ def trace_flags(data: np.ndarray) -> np.ndarray:
     flag = np.zeros(data.shape[0], np.uint8)
     if data.shape[1] == 0:
         return flag | np.uint8(FLAG_DEAD)
-    finite = np.isfinite(data).all(axis=1) if data.dtype.kind == "f" else np.ones(data.shape[0], bool)
-    high, low = data.max(axis=1), data.min(axis=1)
-    dead = ~finite | (high == low)
-    flag[dead] |= FLAG_DEAD
+    dead = dead_traces(data)
     live = ~dead
+    high, low = data.max(axis=1), data.min(axis=1)
+    flag[dead] |= FLAG_DEAD
     if live.any():
         for level in (high[live].max(), low[live].min()):
             if data.dtype.kind in "iu" and abs(int(level)) <= 16:

@@ -19,15 +19,16 @@ from scipy.fft import next_fast_len, rfft
 from scipy.ndimage import uniform_filter1d
 from scipy.signal import hilbert
 
+from planum.cube.assemble import dead_traces, wild_traces
 from planum.errors import LineError, Problem
 from planum.lines.reading import read_line
 from planum.lines.recording import ReadOptions, Recording
 from planum.pipeline.store import Store
-from planum.records import Facts, key
+from planum.records import FLAG_DEAD, Facts, key
 
 __all__ = ["CENSUS_VERSION", "Source", "census", "facts_of", "in_order"]
 
-CENSUS_VERSION = 2
+CENSUS_VERSION = 3
 """Raised when the numbers change, so that kept facts are made again."""
 
 MOST_TRACES = 600
@@ -79,7 +80,7 @@ def census(
                 return kept
             facts = facts_of(source.read(), file_id=file_id, centre_ghz=source.options.centre_frequency_ghz or 0.4)
         except LineError as fault:
-            return replace(fault.problems[0], severity="warning")
+            return replace(fault.problems[0], file=source.name, severity="warning")
         except OSError as fault:
             return Problem(
                 came=f"cannot be read ({fault.strerror or fault})",
@@ -139,7 +140,7 @@ def facts_of(recording: Recording, *, file_id: str, centre_ghz: float) -> Facts:
         When no trace is alive.
     """
     raw, dt = recording.data, recording.interval_ns
-    live = np.ptp(raw.astype(np.float32, copy=False), axis=1) > 0
+    live = ~dead_traces(raw) & ((recording.flag & FLAG_DEAD) == 0)
     if not live.any():
         raise LineError(Problem(came="every trace is constant", do="record the line again or leave it out"))
     full = float(np.iinfo(raw.dtype).max) if np.issubdtype(raw.dtype, np.integer) else 0.0
@@ -184,7 +185,22 @@ def facts_of(recording: Recording, *, file_id: str, centre_ghz: float) -> Facts:
         last_xy=_place(recording, -1),
         bend_m=_bend(recording),
         header=_plain(recording.header),
-        problems=tuple(p.to_dict() for p in recording.problems),
+        problems=tuple(p.to_dict() for p in (*recording.problems, *_wild(raw))),
+    )
+
+
+def _wild(raw: np.ndarray) -> tuple[Problem, ...]:
+    """Say which traces were left out because their samples cannot be true."""
+    wild = np.flatnonzero(wild_traces(raw))
+    if not wild.size:
+        return ()
+    return (
+        Problem(
+            came=f"{wild.size} trace(s) hold samples over a hundred times beyond all others, first in trace {wild[0]}",
+            allowed="they are taken as dead",
+            do="copy the file again; if it stays so, ask the recorder's service",
+            severity="warning",
+        ),
     )
 
 
@@ -238,10 +254,10 @@ def _pick_spread(traces: np.ndarray, dt: float, centre_ghz: float, pick: float) 
 
 
 def _spectrum(traces: np.ndarray, dt: float) -> tuple[np.ndarray, float]:
-    """Mean amplitude spectrum of tapered traces, and its frequency step in GHz."""
+    """Median amplitude spectrum of tapered traces, and its frequency step in GHz: no single trace moves it."""
     n = next_fast_len(max(256, traces.shape[1]), real=True)
     taper = np.hanning(traces.shape[1] + 2)[1:-1].astype(np.float32)
-    return np.abs(rfft(traces * taper, n=n, axis=1)).mean(axis=0), 1.0 / (n * dt)
+    return np.median(np.abs(rfft(traces * taper, n=n, axis=1)), axis=0), 1.0 / (n * dt)
 
 
 def _rounded(curve: np.ndarray) -> tuple[float, ...]:
