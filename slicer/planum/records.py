@@ -43,6 +43,7 @@ __all__ = [
     "Velocity",
     "canon",
     "key",
+    "migration_velocity",
 ]
 
 FLAG_NONE, FLAG_DEAD, FLAG_CLIPPED, FLAG_FILLED, FLAG_POSITION, FLAG_RIM = 1, 2, 4, 8, 16, 32
@@ -164,7 +165,7 @@ class Facts(Record):
     clipped: tuple[int, ...] = ()
     typical: tuple[float, ...] = Field(description="robust typical trace (midmean of live traces), raw samples")
     envelope: tuple[float, ...] = Field(description="median envelope of typical-removed, dewowed traces, per sample")
-    spectrum: tuple[float, ...] = Field(description="mean amplitude spectrum over the ground window")
+    spectrum: tuple[float, ...] = Field(description="median amplitude spectrum over the ground window")
     spectrum_step_ghz: float
     noise: float = Field(description="median envelope over the last tenth of the window")
     direct: float = Field(description="envelope of the typical trace's direct wave")
@@ -185,6 +186,9 @@ class LineEntry(Record):
     row: int = Field(description="index on the cube's line axis")
     file: str
     file_id: str = ""
+    interval_ns: float | None = Field(
+        None, gt=0, description="sample interval of the recording; None: as the file says"
+    )
     first_trace: int
     last_trace: int
     start: tuple[float, float]
@@ -288,7 +292,6 @@ class SetPlan(Record):
     geometry: CubeGeometry
     centre_frequency_ghz: float
     separation_m: float
-    interval_ns: float = Field(description="sample interval of the recordings")
     reader: dict[str, Any] = Field({}, description="how the line files are read: split, layout, reader")
     zero: Estimate
     velocity: Velocity
@@ -297,6 +300,11 @@ class SetPlan(Record):
     entries: tuple[LineEntry, ...]
     frame: Similarity
     limit_depth_m: float | None = Field(None, description="where the median envelope meets twice the noise")
+
+
+def migration_velocity(plan: SetPlan) -> float | None:
+    """Return the velocity a set's lines are migrated at, m/ns; None when they are not."""
+    return next((s.params.get("velocity_m_per_ns") for s in plan.chain if s.name == "migrate"), None)
 
 
 class Plan(Record):
@@ -405,7 +413,8 @@ class SetFacts:
 
     ``typical`` is a cube (line: one row per recorded line, along: 1, time) of robust typical traces *as they arrive
     at the step that learns*; ``envelope`` (n_time) the median raw envelope over lines with typical traces removed;
-    ``noise`` its late level; ``spectrum`` (frequency) the mean amplitude spectrum, ``spectrum_step_ghz`` its step.
+    ``noise`` its late level, which is noise only where it has stopped falling; ``spectrum`` (frequency) the median
+    amplitude spectrum, ``spectrum_step_ghz`` its step.
     """
 
     geometry: CubeGeometry

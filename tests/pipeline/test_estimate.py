@@ -73,48 +73,71 @@ def picked(*picks: float, **changed: Any) -> list[Line]:
 
 def test_time_zero_is_the_direct_wave_less_its_way_through_air() -> None:
     """Emission, not arrival: separation / c earlier than the envelope maximum; the median of the set."""
-    own, zero = time_zero(picked(-0.02, 0.01, 0.0, 0.03, -0.01), RADAR)
+    found = time_zero(picked(-0.02, 0.01, 0.0, 0.03, -0.01), RADAR)
+    zero = found.estimate
     assert zero.value == pytest.approx(6.0, abs=1e-4)  # rounded to four digits
     assert zero.origin == "measured"
     assert zero.n == 5
     assert zero.evidence == ""
-    # A quarter of the distance between air and ground wave at 0.1 m/ns, as the convention says of itself.
-    assert zero.error == pytest.approx(0.25 * (0.16 / 0.1 - AIR_NS), abs=1e-4)
-    assert own == [zero.value] * 5
+    # A quarter of the distance between air and ground wave at 0.1 m/ns, and the mean's scatter (0.017 / sqrt 5).
+    scatter = float(np.std([-0.02, 0.01, 0.0, 0.03, -0.01])) / math.sqrt(5)
+    assert zero.error == pytest.approx(math.hypot(0.25 * (0.16 / 0.1 - AIR_NS), scatter), abs=1e-4)
+    assert found.zeros == (zero.value,) * 5
+    assert found.problems == ()
 
 
 def test_clean_lines_share_one_zero_and_a_shifted_one_has_its_own() -> None:
     """Half a nanosecond is a restart of the instrument; a few hundredths are its noise."""
-    own, zero = time_zero(picked(0.0, 0.04, 0.5, -0.05, 0.02, -0.03, 0.01), RADAR)
+    found = time_zero(picked(0.0, 0.04, 0.5, -0.05, 0.02, -0.03, 0.01), RADAR)
+    own, zero = found.zeros, found.estimate
     assert own[2] == pytest.approx(6.5, abs=1e-4)
-    assert own[:2] + own[3:] == [zero.value] * 6
+    assert own[:2] + own[3:] == (zero.value,) * 6
     assert zero.value == pytest.approx(6.01, abs=1e-4)
+
+
+def test_another_wave_is_no_drift() -> None:
+    """A line whose first strong wave is more than half a period (1.25 ns) off keeps the set's zero, and is told."""
+    found = time_zero(picked(0.0, 0.0, -6.0, 0.0, 0.01), RADAR)
+    assert found.zeros == (found.estimate.value,) * 5
+    (problem,) = found.problems
+    assert problem.came == "the first strong wave comes at 0.00 ns, on the other lines at 6.00 ns"
+    assert problem.line == "2"
+
+
+@pytest.mark.parametrize("fault", [{"zero_pick_ns": 0.4}, {"direct": 3.0, "noise": 1.0}])
+def test_no_direct_wave_is_no_certainty(fault: dict[str, float]) -> None:
+    """A pick at the start of the record, or hardly above noise: half a period (1.25 ns) more error, and a warning."""
+    lines = [line(i, **{"zero_pick_ns": 6.0 + AIR_NS, **fault}) for i in range(4)]
+    found = time_zero(lines, RADAR)
+    assert found.estimate.error == pytest.approx(math.hypot(0.25 * (0.16 / 0.1 - AIR_NS), 1.25), abs=1e-4)
+    assert "no direct wave can be told" in found.problems[0].came
+    assert found.problems[0].key == f"radar[{RADAR.name}].time_zero_ns"
 
 
 def test_noisy_pick_does_not_move_a_line() -> None:
     """A pick that scatters by 1.5 ns along 121 traces is known to 1.5 / sqrt(6) = 0.6 ns: 0.5 ns off means nothing."""
     lines = [*picked(0.0, 0.01, 0.0, 0.0), line(9, zero_pick_ns=6.5 + AIR_NS, zero_spread_ns=1.5)]
-    own, zero = time_zero(lines, RADAR)
-    assert own == [zero.value] * 5
+    found = time_zero(lines, RADAR)
+    assert found.zeros == (found.estimate.value,) * 5
 
 
 def test_clipped_direct_waves_raise_the_error() -> None:
     """From half of the lines on, by a quarter period (0.625 ns at 400 MHz), as squares; fewer change nothing."""
-    clean = time_zero(picked(0.0, 0.0, 0.0, 0.0), RADAR)[1]
-    half = picked(0.0, 0.0) + picked(0.0, 0.0, zero_clipped=True)
-    one = picked(0.0, 0.0, 0.0) + picked(0.0, zero_clipped=True)
-    assert time_zero(half, RADAR)[1].error == pytest.approx(math.hypot(clean.error, 0.625), abs=1e-4)
-    assert time_zero(half, RADAR)[1].evidence == "direct wave clipped on 2 of 4 lines"
-    assert time_zero(one, RADAR)[1].error == clean.error
-    assert "1 of 4" in time_zero(one, RADAR)[1].evidence
+    clean = time_zero(picked(0.0, 0.0, 0.0, 0.0), RADAR).estimate
+    half = time_zero(picked(0.0, 0.0) + picked(0.0, 0.0, zero_clipped=True), RADAR).estimate
+    one = time_zero(picked(0.0, 0.0, 0.0) + picked(0.0, zero_clipped=True), RADAR).estimate
+    assert half.error == pytest.approx(math.hypot(clean.error, 0.625), abs=1e-4)
+    assert half.evidence == "direct wave clipped on 2 of 4 lines"
+    assert one.error == clean.error
+    assert "1 of 4" in one.evidence
 
 
 def test_typed_time_zero_wins() -> None:
     """Whatever the picks say, all lines get what the survey says."""
     typed = RADAR.model_copy(update={"time_zero_ns": 7.25})
-    own, zero = time_zero(picked(0.0, 0.5, -1.0), typed)
-    assert own == [7.25] * 3
-    assert (zero.value, zero.origin) == (7.25, "given")
+    found = time_zero(picked(0.0, 0.5, -1.0), typed)
+    assert found.zeros == (7.25,) * 3
+    assert (found.estimate.value, found.estimate.origin) == (7.25, "given")
 
 
 # --- balance ---

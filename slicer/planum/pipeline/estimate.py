@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import xarray as xr
@@ -22,7 +22,16 @@ from planum.records import CubeGeometry, Estimate, Facts, LineEntry, SetFacts, V
 from planum.survey.config import Radar
 from planum.survey.folder import RegisterRow
 
-__all__ = ["Line", "balance", "given_velocity", "scanned_velocity", "set_facts", "time_zero", "typical_traces"]
+__all__ = [
+    "Line",
+    "TimeZero",
+    "balance",
+    "given_velocity",
+    "scanned_velocity",
+    "set_facts",
+    "time_zero",
+    "typical_traces",
+]
 
 FLOOR_ZERO_NS = 0.1
 """A line's own time zero is used when it differs by more than this and by three of its errors: clean lines keep one."""
@@ -52,40 +61,87 @@ class Line:
     header: bool = False
 
 
-def time_zero(lines: Sequence[Line], radar: Radar) -> tuple[list[float], Estimate]:
-    """Return each line's time zero (ns from sample 0) and the set's, with the error of the convention.
+@dataclass(frozen=True)
+class TimeZero:
+    """Time zero of every line, ns from sample 0, the set's with its error, and what was noticed."""
+
+    zeros: tuple[float, ...]
+    estimate: Estimate
+    problems: tuple[Problem, ...] = ()
+
+    def only(self, keep: Sequence[int]) -> TimeZero:
+        """Return it for some of the lines."""
+        return replace(self, zeros=tuple(self.zeros[i] for i in keep))
+
+
+def time_zero(lines: Sequence[Line], radar: Radar) -> TimeZero:
+    """Return each line's time zero and the set's, with the error of the convention.
 
     Time zero is the envelope maximum of the direct wave less the air path, separation over the speed of light: pulse
     delay then cancels in envelope slices. The direct wave is the sum of an air and a ground wave, so the maximum lies
-    somewhere between the two arrivals; a quarter of their distance at 0.1 m/ns is the 1-sigma error, and a clipped
-    direct wave adds a quarter period.
+    somewhere between the two arrivals; a quarter of their distance at 0.1 m/ns is the 1-sigma error. A direct wave that
+    is clipped adds a quarter period, one that cannot be told from the start of the record or from noise half a period,
+    and the scatter between lines is added too. A line more than half a period from the others keeps the set's time
+    zero and is told: that is another wave, not a drift.
     """
-    separation = radar.antenna_separation_m
-    air = separation / SPEED_OF_LIGHT
-    error = 0.25 * (separation / 0.1 - air)
+    air = radar.antenna_separation_m / SPEED_OF_LIGHT
+    error = 0.25 * (radar.antenna_separation_m / 0.1 - air)
     if radar.time_zero_ns is not None:
         given = radar.time_zero_ns
         estimate = Estimate(value=given, error=error, unit="ns", origin="given", method="typed in the survey")
-        return [given] * len(lines), estimate
+        return TimeZero((given,) * len(lines), estimate)
     picks = np.array([line.facts.zero_pick_ns - air for line in lines])
-    common = float(np.median(picks))
-    clipped = sum(line.facts.zero_clipped for line in lines)
-    if clipped * 2 >= len(lines):
-        error = math.hypot(error, 0.25e3 / radar.centre_frequency_mhz)
-    own = []
+    common, period = float(np.median(picks)), 1e3 / radar.centre_frequency_mhz
+    problems, own = [], []
     for pick, line in zip(picks, lines, strict=True):
+        off = abs(pick - common)
         spread = line.facts.zero_spread_ns / math.sqrt(max(1.0, line.facts.n_traces / 20.0))
-        moved = abs(pick - common) > max(FLOOR_ZERO_NS, 3.0 * spread)
-        own.append(round(float(pick) if moved else common, 4))
-    method = "envelope maximum of the direct wave less separation / c"
-    return own, Estimate(
+        if off > 0.5 * period:
+            problems.append(_late(line, float(pick), common))
+        own.append(pick if 0.5 * period >= off > max(FLOOR_ZERO_NS, 3.0 * spread) else common)
+    near = np.abs(picks - common) <= 0.5 * period
+    scatter = float(np.std(picks[near])) if near.sum() > 1 else 0.0
+    clipped = sum(line.facts.zero_clipped for line in lines)
+    unsure = sum(_unsure(line.facts, period) for line in lines)
+    if unsure * 2 >= len(lines):
+        problems.append(_no_direct_wave(unsure, len(lines), radar))
+    widened = [0.25 * period] * (clipped * 2 >= len(lines)) + [0.5 * period] * (unsure * 2 >= len(lines))
+    estimate = Estimate(
         value=round(common, 4),
-        error=round(error, 4),
+        error=round(math.hypot(error, scatter / math.sqrt(len(lines)), *widened), 4),
         unit="ns",
         origin="measured",
-        method=method,
+        method="envelope maximum of the direct wave less separation / c",
         n=len(lines),
         evidence=f"direct wave clipped on {clipped} of {len(lines)} lines" if clipped else "",
+    )
+    return TimeZero(tuple(round(float(z), 4) for z in own), estimate, tuple(problems))
+
+
+def _unsure(facts: Facts, period: float) -> bool:
+    """Whether the pick may be no direct wave: at the very start of the record, or hardly above the noise."""
+    return facts.zero_pick_ns < 0.5 * period or facts.direct < 4.0 * facts.noise
+
+
+def _late(line: Line, pick: float, common: float) -> Problem:
+    return Problem(
+        came=f"the first strong wave comes at {pick:.2f} ns, on the other lines at {common:.2f} ns",
+        allowed="half a period of difference",
+        do="look at the line: its recording may have started late; the set's time zero was used",
+        file=line.row.file,
+        line=line.row.line,
+        severity="warning",
+    )
+
+
+def _no_direct_wave(unsure: int, n: int, radar: Radar) -> Problem:
+    return Problem(
+        came=f"no direct wave can be told from the start of the record or from noise on {unsure} of {n} lines",
+        allowed="a direct wave to count time from",
+        do="give time_zero_ns; until then every depth may be off by a quarter of a wavelength or more",
+        file="survey.toml",
+        key=f"radar[{radar.name}].time_zero_ns",
+        severity="warning",
     )
 
 
@@ -133,19 +189,30 @@ def _across(entry: LineEntry, geometry: CubeGeometry) -> float:
 
 
 def set_facts(
-    entries: Sequence[LineEntry], facts: Sequence[Facts], geometry: CubeGeometry, radar: Radar, velocity: Velocity
+    entries: Sequence[LineEntry],
+    facts: Sequence[Facts],
+    geometry: CubeGeometry,
+    radar: Radar,
+    velocity: Velocity,
+    *,
+    pool: Sequence[tuple[LineEntry, Facts]] = (),
 ) -> SetFacts:
-    """Return what the recipe's steps may learn from."""
+    """Return what the recipe's steps may learn from.
+
+    Envelope, noise and spectrum come from ``pool``, all lines of the site recorded with this radar, so that one gain
+    and one band serve all its sets; typical traces from the set's own lines.
+    """
     times = geometry.times()
+    every = pool or tuple(zip(entries, facts, strict=True))
     curves, noises = [], []
-    for entry, fact in zip(entries, facts, strict=True):
+    for entry, fact in every:
         at = fact.interval_ns * np.arange(fact.n_samples)
         zero = float(np.median([ns for _, ns in entry.zero_ns]))
         curves.append(entry.gain * np.interp(times + zero, at, fact.envelope))
         noises.append(entry.gain * fact.noise)
-    step = float(np.median([f.spectrum_step_ghz for f in facts]))
-    axis = step * np.arange(min(len(f.spectrum) for f in facts))
-    spectra = [np.interp(axis, f.spectrum_step_ghz * np.arange(len(f.spectrum)), f.spectrum) for f in facts]
+    step = float(np.median([f.spectrum_step_ghz for _, f in every]))
+    axis = step * np.arange(min(len(f.spectrum) for _, f in every))
+    spectra = [np.interp(axis, f.spectrum_step_ghz * np.arange(len(f.spectrum)), f.spectrum) for _, f in every]
     return SetFacts(
         geometry=geometry,
         centre_frequency_ghz=radar.centre_frequency_mhz / 1e3,
@@ -154,7 +221,7 @@ def set_facts(
         typical=typical_traces(entries, facts, geometry),
         envelope=np.median(curves, axis=0),
         noise=float(np.median(noises)),
-        spectrum=np.mean(spectra, axis=0),
+        spectrum=np.median(spectra, axis=0),
         spectrum_step_ghz=step,
     )
 

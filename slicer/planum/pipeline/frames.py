@@ -15,8 +15,12 @@ from planum.records import Similarity
 from planum.site.place import fit_similarity
 from planum.survey.folder import Survey
 
-__all__ = ["from_headers", "site_frames"]
+__all__ = ["frame_warnings", "from_headers", "site_frames"]
 
+LARGEST_RESIDUAL_M = 0.05
+"""Residuals above it are told (common practice for grid pegs)."""
+ODD_SCALE = 0.005
+"""No projection and no honest tape changes lengths by more than this."""
 LARGEST_BEND_M = 0.10
 """Header positions farther than this from a straight line are told: traces are gridded on their line's row."""
 
@@ -49,6 +53,38 @@ def site_frames(survey: Survey) -> dict[str, Similarity]:
         mapped = np.array([[c.easting_m, c.northing_m] for c in points])
         out[grid.name] = fit_similarity([c.point for c in points], local, mapped, grid=grid.name)
     return out
+
+
+def frame_warnings(frames: Mapping[str, Similarity], survey: Survey) -> list[Problem]:
+    """Tell what a fit cannot: handedness from two or collinear points, residuals and scales out of the ordinary."""
+    problems = []
+    for grid, frame in frames.items():
+        points = [c for c in survey.control if c.point in dict(frame.residuals_m)]
+        if not frame.residuals_m:
+            continue
+        local = np.array([[c.local_x_m, c.local_y_m] for c in points])
+        spread = np.linalg.svd(local - local.mean(axis=0), compute_uv=False)
+        worst, miss = max(frame.residuals_m, key=lambda pair: pair[1])
+        for wrong, came, do in (
+            (
+                spread[-1] < 0.02 * spread[0],
+                "the control points lie on one line: they do not tell to which hand y points",
+                "add a point off that line; until then the map may be mirrored",
+            ),
+            (
+                miss > LARGEST_RESIDUAL_M,
+                f"point {worst} is {miss:.2f} m from where the fit puts it",
+                "check its coordinates; the whole grid may be off by as much",
+            ),
+            (
+                abs(frame.scale - 1.0) > ODD_SCALE,
+                f"the control points ask for a scale of {frame.scale:.4f}",
+                "check them and the tape: distances are changed by as much",
+            ),
+        ):
+            if wrong:
+                problems.append(Problem(came=came, do=do, file="control.csv", key=f"grid {grid}", severity="warning"))
+    return problems
 
 
 def from_headers(

@@ -130,7 +130,7 @@ class _Set:
             if values is not None and marks is not None:
                 flag[i] = marks
         self.gridder = LineGridder(g, flag, cell_m=cell_m)
-        self.folder = store.path("strips", key([plan.name, list(rows)]), "")
+        self.folder = store.path("strips", key([GRIDDING_VERSION, plan.name, list(rows)]), "")
         if not self.folder.is_dir():
             self._collect(kept, len(plan.windows_ns))
         root = zarr.open_group(self.folder, mode="r", zarr_format=3)

@@ -23,7 +23,7 @@ def row_key(plan: SetPlan, row: int) -> str:
     """Return what one row's strip depends on, hashed: bytes, corrections, axes, chain and windows."""
     entries = [e.model_dump(mode="json", exclude={"because", "key"}) for e in plan.entries if e.row == row]
     chain = [s.model_dump(mode="json") for s in plan.chain]
-    return key([KERNEL_VERSION, row, entries, plan.geometry, chain, plan.windows_ns, plan.interval_ns, plan.reader])
+    return key([KERNEL_VERSION, row, entries, plan.geometry, chain, plan.windows_ns, plan.reader])
 
 
 def read_pieces(folder: Path, plan: SetPlan, row: int, *, roots: Sequence[Path] = ()) -> list[Piece]:
@@ -61,7 +61,7 @@ def strip_of(
 def _options(plan: SetPlan, entry: LineEntry) -> ReadOptions:
     layout = plan.reader.get("layout")
     return ReadOptions(
-        interval_ns=plan.interval_ns,
+        interval_ns=entry.interval_ns,
         centre_frequency_ghz=plan.centre_frequency_ghz,
         part=entry.part,
         split=plan.reader.get("split"),

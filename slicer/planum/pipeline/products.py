@@ -32,6 +32,7 @@ from planum.pipeline.told import PRODUCTS_VERSION, RunFacts, statements, version
 from planum.records import Facts, Plan, SetPlan, Statement, Strip, canon, key
 from planum.scene.picture import render_safely
 from planum.slices.structure import best_slices, structure
+from planum.survey.control import ControlPoint
 
 __all__ = ["section_key", "section_picture", "write_products"]
 
@@ -64,10 +65,10 @@ def section_picture(path: Path, plan: Plan, s: SetPlan, strip: Strip) -> None:
 def shapes(run: RunFacts, stack: xr.Dataset, linked: Mapping[tuple[str, str], str]) -> SiteShapes:
     """Return lines, grids, control points and coverage in the map frame."""
     lines, grids = [], []
-    residuals: dict[str, float] = {}
+    residuals: dict[tuple[str, str], float] = {}
     pictures = {row: name for (_, row), name in linked.items()}
     for s in run.plan.sets:
-        residuals |= dict(s.frame.residuals_m)
+        residuals |= {(s.grid.casefold(), point): miss for point, miss in s.frame.residuals_m}
         for e in s.entries:
             coords = np.column_stack(s.frame.forward(*np.array([e.start, e.end]).T))
             about: dict[str, Attribute] = {
@@ -85,13 +86,20 @@ def shapes(run: RunFacts, stack: xr.Dataset, linked: Mapping[tuple[str, str], st
             c.point,
             c.easting_m,
             c.northing_m,
-            residuals.get(c.point),
+            _residual(residuals, c),
             {"grid": c.grid or "site", "local_x_m": c.local_x_m, "local_y_m": c.local_y_m},
         )
         for c in run.control
     ]
     covered = stack["coverage"].values
     return SiteShapes(run.plan.crs or "", lines, grids, control, coverage=covered, raster=raster_of(stack))
+
+
+def _residual(residuals: Mapping[tuple[str, str], float], point: ControlPoint) -> float | None:
+    """Return a point's residual in its own grid; a site point's largest over the grids it placed."""
+    if point.grid:
+        return residuals.get((point.grid.casefold(), point.point))
+    return max((miss for (_, name), miss in residuals.items() if name == point.point), default=None)
 
 
 def _grid_shape(s: SetPlan) -> GridShape:

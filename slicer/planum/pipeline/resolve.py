@@ -12,26 +12,23 @@ import numpy as np
 from pydantic import BaseModel
 
 import planum
-from planum.cube.geometry import cube_geometry, line_direction, place_rows
 from planum.engine.linepass import condition, row_cube
 from planum.errors import Problem, SurveyError
 from planum.pipeline.census import in_order
 from planum.pipeline.estimate import (
     SCAN_LINES,
     Line,
-    balance,
     given_velocity,
     scanned_velocity,
     set_facts,
-    time_zero,
 )
-from planum.pipeline.frames import from_headers, site_frames
+from planum.pipeline.frames import frame_warnings, from_headers, site_frames
 from planum.pipeline.passes import read_pieces
 from planum.pipeline.recipe import resolve_chain, settings
+from planum.pipeline.sets import Draft, draft_sets
 from planum.pipeline.store import Store
-from planum.records import CubeGeometry, Estimate, Facts, LineEntry, Plan, SetPlan, Similarity, Velocity, key
+from planum.records import Plan, SetPlan, Velocity, key, migration_velocity
 from planum.slices.intervals import intervals
-from planum.survey.config import Radar
 from planum.survey.folder import Survey
 
 __all__ = ["Resolution", "check_cells", "resolve"]
@@ -44,29 +41,12 @@ Progress = Callable[[str, int, int], None]
 
 @dataclass(frozen=True)
 class Resolution:
-    """The plan, what was noticed on the way, and the evidence behind the velocity."""
+    """The plan, what was noticed and set aside on the way, and the evidence behind the velocity."""
 
     plan: Plan
     warnings: tuple[Problem, ...]
+    set_aside: tuple[Problem, ...] = ()
     curve: Mapping[str, list[float]] = field(default_factory=dict)
-
-
-@dataclass(frozen=True)
-class _Draft:
-    """A set before its velocity is known."""
-
-    name: str
-    lines: tuple[Line, ...]
-    radar: Radar
-    entries: tuple[LineEntry, ...]
-    geometry: CubeGeometry
-    zero: Estimate
-    frame: Similarity
-    reader: dict[str, Any]
-
-    @property
-    def facts(self) -> list[Facts]:
-        return [line.facts for line in self.lines]
 
 
 def resolve(
@@ -88,11 +68,14 @@ def resolve(
     chosen = settings({"steps": survey.config.recipe.names(), **survey.config.recipe.settings()})
     warnings: list[Problem] = []
     lines, frames = from_headers(survey, lines, site_frames(survey), warnings)
-    drafts = [_draft(name, group, survey, frames, warnings) for name, group in _sets(lines).items()]
+    aside = list(set_aside)
+    warnings += frame_warnings(frames, survey)
+    drafts = draft_sets(survey, lines, frames, warnings=warnings, aside=aside)
     velocity, curve = _velocity(survey, drafts, chosen, store, executor, warnings, progress)
     first = drafts[0]
     windows = _intervals(survey, drafts, velocity, warnings)
     sets = tuple(_finish(d, chosen, velocity, windows) for d in drafts)
+    warnings += _other_velocity(sets)
     cell = min(_cell(survey, d) for d in drafts)
     plan = Plan(
         version=planum.__version__,
@@ -103,119 +86,21 @@ def resolve(
         bounds=_bounds(sets, cell),
         intervals_m=windows,
         sets=sets,
-        set_aside=tuple(p.to_dict() for p in set_aside),
+        set_aside=tuple(p.to_dict() for p in aside),
         notes=tuple(_notes(first, sets, velocity)),
     )
-    return Resolution(plan, tuple(warnings), curve)
-
-
-def _sets(lines: Sequence[Line]) -> dict[str, list[Line]]:
-    """Group lines by grid, direction, radar and visit."""
-    groups: dict[tuple[str, str, str, str], list[Line]] = {}
-    for line in lines:
-        way = line_direction(line.row.start, line.row.end) or "x"
-        groups.setdefault((line.row.grid, way, line.row.radar, line.row.visit), []).append(line)
-    radars = {(grid, radar) for grid, _, radar, _ in groups}
-    problems = [
-        Problem(
-            came=f"grid {grid} was recorded with more than one radar",
-            allowed="one radar in a grid: combining antennas is not supported yet",
-            do="give each radar's lines a grid of their own, in a survey of their own",
-            key="grid.radar",
-        )
-        for grid in sorted({g for g, _ in radars})
-        if sum(g == grid for g, _ in radars) > 1
-    ]
-    if problems:
-        raise SurveyError(problems)
-    many_visits = len({(g, v) for g, _, _, v in groups}) > len({g for g, _, _, _ in groups})
-    return {
-        f"{grid}/{way}" + (f"@{visit}" if many_visits else ""): group for (grid, way, _, visit), group in groups.items()
-    }
-
-
-def _draft(
-    name: str, lines: Sequence[Line], survey: Survey, frames: Mapping[str, Similarity], warnings: list[Problem]
-) -> _Draft:
-    grid = survey.config.grid_named(lines[0].row.grid)
-    radar = survey.config.radar_named(lines[0].row.radar)
-    zeros, zero = time_zero(lines, radar)
-    gains = balance(lines)
-    entries = [_entry(name, line, z, g, warnings) for line, z, g in zip(lines, zeros, gains, strict=True)]
-    dt = float(np.median([line.facts.interval_ns for line in lines]))
-    period = 1e3 / radar.centre_frequency_mhz
-    before = min(math.floor(min(zeros) / dt + 1e-9), math.ceil(1.5 * period / dt))
-    after = min((f.n_samples - 1) * f.interval_ns - z for f, z in zip([x.facts for x in lines], zeros, strict=True))
-    geometry = cube_geometry(
-        entries,
-        line_step_m=abs(grid.line_spacing_m) if grid.line_spacing_m else None,
-        along_step_m=grid.trace_spacing_m,
-        time_step_ns=dt,
-        n_time=max(before, 0) + math.floor(after / dt + 1e-9) + 1,
-        time0_ns=-max(before, 0) * dt,
-    )
-    placed, off = place_rows(entries, geometry)
-    warnings += off
-    raw = lines[0].source.options.layout
-    reader = {
-        "split": grid.split,
-        "layout": None if raw is None else vars(raw),
-        "reader": lines[0].source.options.reader,
-    }
-    return _Draft(name, tuple(lines), radar, placed, geometry, zero, frames[grid.name], reader)
-
-
-def _entry(name: str, line: Line, zero: float, gain: float, warnings: list[Problem]) -> LineEntry:
-    row, facts = line.row, line.facts
-    first = row.first_trace or 0
-    wanted = facts.n_traces - 1 if row.last_trace is None else row.last_trace
-    last = min(wanted, facts.n_traces - 1)
-    end = row.end
-    if last < wanted:
-        share = (last - first) / max(1, wanted - first)
-        end = tuple(a + share * (b - a) for a, b in zip(row.start, row.end, strict=True))  # type: ignore[assignment]
-        warnings.append(
-            Problem(
-                came=f"trace {wanted} is asked for, the last recorded is {last}",
-                allowed="the line is mapped as far as it was recorded",
-                do="check last_trace in the register",
-                file=row.file,
-                line=row.line,
-                severity="warning",
-            )
-        )
-    because = []
-    if gain != 1.0:
-        because.append("line balance")
-    return LineEntry(
-        key=f"{name}/{row.line}/{first}",
-        set=name,
-        grid=row.grid,
-        line=row.line,
-        row=0,
-        file=row.file,
-        file_id=facts.file_id,
-        first_trace=first,
-        last_trace=last,
-        start=row.start,
-        end=end,
-        part=row.part,
-        header_positions=line.header,
-        zero_ns=((0, zero),),
-        gain=gain,
-        because=tuple(because),
-    )
+    return Resolution(plan, tuple(warnings), tuple(aside), curve)
 
 
 def _finish(
-    draft: _Draft,
+    draft: Draft,
     chosen: Mapping[str, BaseModel],
     velocity: Velocity,
     windows_m: Sequence[tuple[float, float]],
     *,
     until: str | None = None,
 ) -> SetPlan:
-    facts = set_facts(draft.entries, draft.facts, draft.geometry, draft.radar, velocity)
+    facts = set_facts(draft.entries, draft.facts, draft.geometry, draft.radar, velocity, pool=draft.pool)
     chain = resolve_chain(chosen, facts, until=until)
     gain = next((s.params for s in chain if s.name == "gain"), {})
     stop = gain.get("stop_ns")
@@ -223,13 +108,12 @@ def _finish(
     edges = [velocity.time(np.array(w), separation_m=separation) for w in windows_m]
     return SetPlan(
         name=draft.name,
-        grid=draft.lines[0].row.grid,
+        grid=draft.grid,
         radar=draft.radar.name,
-        visit=draft.lines[0].row.visit,
+        visit=draft.visit,
         geometry=draft.geometry,
         centre_frequency_ghz=draft.radar.centre_frequency_mhz / 1e3,
         separation_m=separation,
-        interval_ns=draft.geometry.time_step_ns,
         reader=draft.reader,
         zero=draft.zero,
         velocity=velocity,
@@ -243,7 +127,7 @@ def _finish(
 
 def _velocity(
     survey: Survey,
-    drafts: Sequence[_Draft],
+    drafts: Sequence[Draft],
     chosen: Mapping[str, BaseModel],
     store: Store,
     executor: Executor,
@@ -286,7 +170,7 @@ def _spread(plan: SetPlan, most: int) -> list[int]:
 
 
 def _intervals(
-    survey: Survey, drafts: Sequence[_Draft], velocity: Velocity, warnings: list[Problem]
+    survey: Survey, drafts: Sequence[Draft], velocity: Velocity, warnings: list[Problem]
 ) -> tuple[tuple[float, float], ...]:
     """Return the depth intervals that every set recorded to their bottom."""
     table = survey.config.slices
@@ -317,9 +201,19 @@ def _intervals(
     return kept
 
 
-def _cell(survey: Survey, draft: _Draft) -> float:
+def _cell(survey: Survey, draft: Draft) -> float:
     """Return the typed cell, or a fifth of the line spacing, at the millimetre."""
-    typed = survey.config.grid_named(draft.lines[0].row.grid).cell_m
+    typed = survey.config.grid_named(draft.grid).cell_m
+    if typed and typed > draft.geometry.line_step_m:
+        raise SurveyError(
+            Problem(
+                came=f"cell_m is {typed:g}, the lines are {draft.geometry.line_step_m:g} m apart",
+                allowed="at most the line spacing; a fifth of it when left out",
+                do="choose a smaller cell",
+                file="survey.toml",
+                key=f"grid[{draft.grid}].cell_m",
+            )
+        )
     return typed or max(0.001, round(draft.geometry.line_step_m / 5.0, 3))
 
 
@@ -356,13 +250,30 @@ def check_cells(bounds: tuple[float, float, float, float], cell_m: float) -> Non
             Problem(
                 came=f"the grids span {wide} × {tall} cells of {cell_m:g} m",
                 allowed=f"at most {MOST_CELLS:,} cells",
-                do="look for a mistyped control point, map distant grids as surveys of their own, or raise cell_m",
-                file="control.csv",
+                do="raise cell_m, look for a mistyped control point, or map distant grids as surveys of their own",
+                file="survey.toml",
+                key="grid.cell_m",
             )
         )
 
 
-def _notes(first: _Draft, sets: Sequence[SetPlan], velocity: Velocity) -> list[str]:
+def _other_velocity(sets: Sequence[SetPlan]) -> list[Problem]:
+    """Tell when lines are migrated at another velocity than depths are counted with."""
+    found = {s.velocity.value: v for s in sets if (v := migration_velocity(s)) not in {None, s.velocity.value}}
+    return [
+        Problem(
+            came=f"lines are migrated at {used:g} m/ns, depths are counted at {depth:g} m/ns",
+            allowed="one velocity for both",
+            do="leave velocity_m_per_ns out of [recipe.migrate] and give it under [ground]",
+            file="survey.toml",
+            key="recipe.migrate.velocity_m_per_ns",
+            severity="warning",
+        )
+        for depth, used in found.items()
+    ]
+
+
+def _notes(first: Draft, sets: Sequence[SetPlan], velocity: Velocity) -> list[str]:
     from planum.migration.stolt import alias_free_dip_deg  # noqa: PLC0415
 
     spacing = max(s.geometry.line_step_m for s in sets)

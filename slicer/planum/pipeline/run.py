@@ -102,8 +102,8 @@ def _run(
     if plan_file is None:
         resolution = resolve(survey, lines, store=store, executor=executor, set_aside=aside, progress=progress)
     else:
-        resolution = Resolution(read_run(plan_file)[0], ())
-    plan = resolution.plan
+        resolution = Resolution(_same_bytes(read_run(plan_file)[0], lines, plan_file), (), tuple(aside))
+    plan, aside = resolution.plan, list(resolution.set_aside)
     warnings = (*survey.warnings, *_noticed(lines), *resolution.warnings)
     run = RunFacts(
         plan=plan,
@@ -127,11 +127,38 @@ def _run(
         for row, k in enumerate(rows[s.name])
         if k is not None
     }
+    if not bool((stack["coverage"] > 0).any()):
+        raise SurveyError(
+            Problem(
+                came="no cell of the raster holds data",
+                do="compare cell_m, the register and control.csv: the lines do not reach the raster",
+                file="survey.toml",
+            )
+        )
     folder = exchange.aside(final, token)
     run = write_products(folder, stack, run, sections=sections, token=token, progress=progress)
     (folder / exchange.MARK).unlink()
     exchange.publish(folder, final)
     return RunResult(final, run.set_aside, run.warnings, changed=True, summary=run.summary())
+
+
+def _same_bytes(plan: Plan, lines: Sequence[Line], plan_file: Path) -> Plan:
+    """Refuse to repeat a plan on other bytes than it was made for."""
+    now = {line.row.file: line.facts.file_id for line in lines}
+    changed = {e.file for s in plan.sets for e in s.entries if now.get(e.file, e.file_id) != e.file_id}
+    if changed:
+        raise SurveyError(
+            [
+                Problem(
+                    came="this file has changed since the plan was made",
+                    allowed="the same bytes",
+                    do=f"restore it, or map without --plan {plan_file.name}",
+                    file=name,
+                )
+                for name in sorted(changed)
+            ]
+        )
+    return plan
 
 
 def plan_site(

@@ -14,7 +14,7 @@ import planum
 from planum.constants import LIMIT_MARGIN, MASK_BETWEEN, MASK_OUTSIDE
 from planum.errors import Problem
 from planum.outputs.stretch import Stretch
-from planum.records import Facts, Plan, Statement, key
+from planum.records import Facts, Plan, Statement, key, migration_velocity
 from planum.survey.control import ControlPoint
 
 __all__ = ["PRODUCTS_VERSION", "RunFacts", "statements", "versions"]
@@ -41,7 +41,10 @@ class RunFacts:
     def output_key(self) -> str:
         """Return the name of this result by content: plan, wording and versions."""
         told = [p.to_dict() for p in (*self.warnings, *self.set_aside)]
-        return key([PRODUCTS_VERSION, planum.__version__, self.plan, told, dict(self.visits)])
+        control = [vars(c) for c in self.control]
+        return key(
+            [PRODUCTS_VERSION, planum.__version__, self.plan, told, control, dict(self.curve), dict(self.visits)]
+        )
 
     def without(self, failed: Sequence[Problem]) -> RunFacts:
         """Return the facts with lines that failed in the second pass set aside as well."""
@@ -79,7 +82,7 @@ class RunFacts:
 def statements(plan: Plan, stack: xr.Dataset, stretch: Stretch) -> tuple[Statement, ...]:
     """Return one statement per slice; where sets differ the least certain speaks."""
     s = max(plan.sets, key=lambda one: one.velocity.error / one.velocity.value)
-    migrated = any(step.name == "migrate" for step in s.chain)
+    at = migration_velocity(s)
     spacing = max(one.geometry.line_step_m for one in plan.sets)
     date = ", ".join(sorted({one.visit for one in plan.sets if one.visit})) or "not stated"
     name = key(plan)
@@ -97,7 +100,7 @@ def statements(plan: Plan, stack: xr.Dataset, stretch: Stretch) -> tuple[Stateme
             zero_error_ns=s.zero.error,
             surface="the ground surface as walked",
             date=date,
-            migration="migrated in 2-D, line by line, at one velocity" if migrated else "not migrated",
+            migration="not migrated" if at is None else f"migrated in 2-D, line by line, at {at:.4g} m/ns",
             fill=FILL,
             line_spacing_m=spacing,
             coverage_rule=COVERAGE_RULE,
