@@ -27,8 +27,8 @@ if TYPE_CHECKING:
 def command(talk: Talk, site: Path, roots: tuple[Path, ...]) -> int:
     """Say all that is wrong with the survey folder SITE, and what a map of it would hold.
 
-    Every mistake comes with its file, line and key, all at once. Each line file is read, nothing is processed and
-    nothing is written.
+    Every mistake comes with its file, line and key, all at once. Each line file is read and every setting tried on what
+    it holds; nothing is processed and nothing is written.
     """
     from planum.pipeline.outlook import outlook
 

@@ -1,23 +1,31 @@
-"""What a survey would give, before it is mapped: every line is read once, nothing is processed."""
+"""What a survey would give, before it is mapped: every line is read once, nothing is processed.
+
+It asks what a map asks, with the same functions, but goes on after a mistake to find the next.
+"""
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
-from dataclasses import dataclass, replace
+import math
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from contextlib import contextmanager
+from dataclasses import dataclass, field, replace
 from pathlib import Path
-from typing import NamedTuple
 
 import numpy as np
+from pydantic import BaseModel
 
-from planum.cube.geometry import line_spacing
-from planum.errors import LineError, Problem, SurveyError
-from planum.lines.reading import read_line
-from planum.pipeline.frames import site_frames
-from planum.pipeline.recipe import settings, toml
+from planum.constants import VELOCITY_RANGE
+from planum.cube.geometry import trace_spacing
+from planum.errors import LineError, PlanumError, Problem, SurveyError
+from planum.pipeline.census import Source, facts_of
+from planum.pipeline.estimate import Line, set_facts
+from planum.pipeline.frames import frame_warnings, from_headers, site_frames
+from planum.pipeline.recipe import resolve_chain, settings, toml
+from planum.pipeline.resolve import check_cells
 from planum.pipeline.run import plan_site, sources_of
-from planum.records import LineEntry
+from planum.pipeline.sets import Draft, draft_sets
+from planum.records import Facts, Similarity, Velocity
 from planum.survey.folder import Survey, read_survey
-from planum.survey.places import direction
 from planum.survey.register import RegisterRow
 
 __all__ = ["Outlook", "SetOutlook", "outlook", "resolved_toml"]
@@ -28,10 +36,21 @@ SOIL_M_PER_NS = (0.06, 0.12)
 """Wet to dry soils (common practice), for an outlook only: a map measures or is told its velocity."""
 
 
-class _Read(NamedTuple):
-    row: RegisterRow
-    n_traces: int
-    window_ns: float
+@dataclass
+class _Found:
+    """What has come to light so far: mistakes that stop a map, lines it would leave out, and what is worth telling."""
+
+    problems: list[Problem] = field(default_factory=list)
+    aside: list[Problem] = field(default_factory=list)
+    warnings: list[Problem] = field(default_factory=list)
+
+    @contextmanager
+    def collect(self) -> Iterator[None]:
+        """Keep the problems of an error and go on behind the block."""
+        try:
+            yield
+        except PlanumError as fault:
+            self.problems += fault.problems
 
 
 @dataclass(frozen=True)
@@ -96,28 +115,35 @@ def outlook(site: Path, *, roots: Sequence[Path] = (), progress: Progress | None
 
     Raises
     ------
-    SurveyError, RecipeError, FrameError
-        With all that has to be corrected first.
+    SurveyError
+        With all that has to be corrected first, and behind it what is only worth telling.
     """
     survey = read_survey(Path(site), roots=roots)
-    chosen = settings({"steps": survey.config.recipe.names(), **survey.config.recipe.settings()})
-    site_frames(survey)  # raises where control points do not fit
-    read, aside, warnings = _read_all(survey, progress)
-    if not read:
-        raise SurveyError([Problem("no line can be used", do="mend what is wrong with each"), *aside])
-    groups: dict[tuple[str, str, str, str], list[_Read]] = {}
-    for line in read:
-        row = line.row
-        groups.setdefault((row.grid, direction(row), row.radar, row.visit), []).append(line)
+    found = _Found(aside=list(survey.set_aside), warnings=list(survey.warnings))
+    chosen: dict[str, BaseModel] = {}
+    with found.collect():
+        chosen = settings({"steps": survey.config.recipe.names(), **survey.config.recipe.settings()})
+    lines = _read_all(survey, found, progress)
+    if not lines:
+        found.problems.insert(0, Problem("no line can be used", do="mend what is wrong with each"))
+    drafts = _drafts(survey, lines, found)
+    for draft in drafts:
+        with found.collect():
+            _try_chain(survey, draft, chosen)
+        _check_depths(survey, draft, found)
+    if drafts:
+        _check_raster(survey, drafts, found)
+    if found.problems:
+        raise SurveyError([*found.problems, *found.aside, *found.warnings])
     return Outlook(
         title=survey.config.survey.title,
         code=survey.config.survey.code,
         crs=survey.config.survey.crs,
-        sets=tuple(_set(survey, group) for group in groups.values()),
+        sets=tuple(_set(survey, draft) for draft in drafts),
         steps=tuple(chosen),
         control=len(survey.control),
-        set_aside=(*survey.set_aside, *aside),
-        warnings=(*survey.warnings, *warnings),
+        set_aside=tuple(found.aside),
+        warnings=tuple(found.warnings),
     )
 
 
@@ -141,64 +167,151 @@ def resolved_toml(site: Path, *, roots: Sequence[Path] = (), progress: Progress 
     return text
 
 
-def _read_all(survey: Survey, progress: Progress | None) -> tuple[list[_Read], list[Problem], list[Problem]]:
-    read: list[_Read] = []
-    aside: list[Problem] = []
-    warnings: list[Problem] = []
+def _read_all(survey: Survey, found: _Found, progress: Progress | None) -> list[Line]:
+    lines = []
     rows = sources_of(survey)
     for done, (row, source) in enumerate(rows, 1):
         try:
-            recording = read_line(source.path, source.options)
+            lines.append(Line(row, source, _facts(row, source)))
         except LineError as error:
             came = f"line {row.grid}/{row.line} is set aside"
-            aside += [replace(p, came=f"{came}: {p.came}", file=row.file, severity="warning") for p in error.problems]
+            found.aside += [
+                replace(p, came=f"{came}: {p.came}", file=row.file, severity="warning") for p in error.problems
+            ]
         else:
-            last = row.last_trace if row.last_trace is not None else len(recording.data) - 1
-            if last >= len(recording.data):
-                came = f"last_trace is {last}, and the file holds {len(recording.data)} traces"
-                warnings.append(Problem(came, do="mend the register", file=row.file, line=row.line, severity="warning"))
-            n_traces = last - (row.first_trace or 0) + 1
-            read.append(_Read(row, n_traces, recording.interval_ns * recording.data.shape[1]))
-            warnings += [replace(p, file=row.file) for p in recording.problems]
+            facts = lines[-1].facts
+            told = [Problem(**p) for p in facts.problems]
+            if facts.n_traces == 1:
+                came, do = "the file holds a single trace", "look whether the recording is whole"
+                told.append(Problem(came, do=do, severity="warning"))
+            found.warnings += [replace(p, file=row.file, line=row.line) for p in told]
         if progress:
             progress("reading lines", done, len(rows))
-    return read, aside, warnings
+    return lines
 
 
-def _set(survey: Survey, group: Sequence[_Read]) -> SetOutlook:
-    rows = [line.row for line in group]
-    way = direction(rows[0])
-    radar, ground = survey.radar(rows[0]), survey.config.ground.velocity_m_per_ns
-    spacing = line_spacing([_entry(row) for row in rows], direction="x" if way == "x" else "y")
-    across = np.array([(row.start[way == "x"] + row.end[way == "x"]) / 2 for row in rows])
-    steps = {round(s) for s in (across - across.min()) / spacing}
-    gaps = [round(float(across.min() + s * spacing), 3) for s in range(max(steps)) if s not in steps]
-    traces = [row.length_m / (line.n_traces - 1) for row, line in zip(rows, group, strict=True) if line.n_traces > 1]
-    return SetOutlook(
-        name=f"{rows[0].grid}/{way}" + (f"@{rows[0].visit}" if rows[0].visit else ""),
-        lines=len(steps),
-        direction=way,
-        spacing_m=round(spacing, 3),
-        missing_m=tuple(gaps),
-        longest_m=max(row.length_m for row in rows),
-        trace_spacing_m=float(np.median(traces)) if traces else float("nan"),
-        window_ns=float(np.median([line.window_ns for line in group])),
-        centre_frequency_mhz=radar.centre_frequency_mhz,
-        velocity_m_per_ns=SOIL_M_PER_NS if ground is None else (ground, ground),
+def _facts(row: RegisterRow, source: Source) -> Facts:
+    """Return what the census would keep of a line.
+
+    Raises
+    ------
+    LineError
+        When it cannot be read, is constant, or ends before the traces the register wants.
+    """
+    facts = facts_of(source.read(), file_id="", centre_ghz=source.options.centre_frequency_ghz or 0.4)
+    if (row.first_trace or 0) >= facts.n_traces:
+        came = f"first_trace is {row.first_trace}, and the file holds {facts.n_traces} traces"
+        raise LineError(Problem(came, do="mend the register"))
+    return facts
+
+
+def _drafts(survey: Survey, lines: Sequence[Line], found: _Found) -> list[Draft]:
+    """Place every set on its cube; where that fails, grid by grid, so that each grid tells its own mistakes."""
+    frames: dict[str, Similarity] | None = None
+    with found.collect():
+        frames = site_frames(survey)
+        found.warnings += frame_warnings(frames, survey)
+    by_register = [line for line in lines if survey.grid(line.row).positions == "register"]
+    if frames is None:
+        lines, frames = by_register, {grid.name: Similarity() for grid in survey.config.grid}
+    else:
+        before = len(found.problems)
+        with found.collect():
+            lines, frames = from_headers(survey, lines, frames, found.warnings)
+        if len(found.problems) > before:
+            lines = by_register
+    grids = list(dict.fromkeys(line.row.grid for line in lines))
+    trial = _Found()
+    drafts: list[Draft] = []
+    with trial.collect():
+        drafts = draft_sets(survey, lines, frames, warnings=trial.warnings, aside=trial.aside)
+    if trial.problems and len(grids) > 1:
+        trial = _Found()
+        for name in grids:
+            own = [line for line in lines if line.row.grid == name]
+            with trial.collect():
+                drafts += draft_sets(survey, own, frames, warnings=trial.warnings, aside=trial.aside)
+    found.problems += trial.problems
+    found.aside += trial.aside
+    found.warnings += trial.warnings
+    return drafts
+
+
+def _velocities(survey: Survey) -> tuple[float, float]:
+    given = survey.config.ground.velocity_m_per_ns
+    return SOIL_M_PER_NS if given is None else (given, given)
+
+
+def _try_chain(survey: Survey, draft: Draft, chosen: Mapping[str, BaseModel]) -> None:
+    """Let every step learn from the set, at a velocity that is only a guess where none is given."""
+    slow, fast = _velocities(survey)
+    guess = Velocity.constant((slow + fast) / 2, (fast - slow) / 2 or 0.05 * slow, origin="book")
+    facts = set_facts(draft.entries, draft.facts, draft.geometry, draft.radar, guess, pool=draft.pool)
+    resolve_chain(chosen, facts)
+
+
+def _check_depths(survey: Survey, draft: Draft, found: _Found) -> None:
+    """Ask whether the record reaches the first slice: surely not is a mistake, perhaps not a warning."""
+    table = survey.config.slices
+    bottom = table.top_m + table.thickness_m
+    last, radar = float(draft.geometry.times()[-1]), draft.radar
+    slow, fast = _velocities(survey)
+    likely, possible = (
+        float(Velocity.constant(v, 0.0, origin="book").depth(last, separation_m=radar.antenna_separation_m))
+        for v in (slow, fast if slow == fast else VELOCITY_RANGE[1])
     )
+    if likely >= bottom - 1e-9:
+        return
+    sure = possible < bottom - 1e-9
+    problem = Problem(
+        f"set {draft.name}: the first slice ends at {bottom:.2f} m, the record {last:.3g} ns after time zero"
+        f" ({draft.zero.value:.4g} ns), which reaches {possible if sure else likely:.2f} m"
+        + ("" if sure else " in slow ground"),
+        do="choose shallower slices, or check time_zero_ns, the sample interval and the velocity",
+        file="survey.toml",
+        key=f"radar[{radar.name}].time_zero_ns" if draft.zero.origin == "given" else "slices",
+        severity="error" if sure else "warning",
+    )
+    (found.problems if sure else found.warnings).append(problem)
 
 
-def _entry(row: RegisterRow) -> LineEntry:
-    """Return what the geometry needs to know of a row."""
-    return LineEntry(
-        key=row.source,
-        set="",
-        grid=row.grid,
-        line=row.line,
-        row=0,
-        file=row.file,
-        first_trace=0,
-        last_trace=1,
-        start=row.start,
-        end=row.end,
+def _check_raster(survey: Survey, drafts: Sequence[Draft], found: _Found) -> None:
+    """Compare cells with the lines: no wider than their spacing, and no more of them than a raster can hold."""
+    cells, corners = [], []
+    for draft in drafts:
+        g, typed = draft.geometry, survey.config.grid_named(draft.grid).cell_m
+        cells.append(typed or max(0.001, round(g.line_step_m / 5.0, 3)))
+        if cells[-1] > g.line_step_m:
+            found.problems.append(
+                Problem(
+                    f"cell_m is {cells[-1]:g}, and the lines are {g.line_step_m:g} m apart",
+                    allowed="at most the line spacing; a fifth of it when left out",
+                    do="choose a smaller cell",
+                    file="survey.toml",
+                    key=f"grid[{draft.grid}].cell_m",
+                )
+            )
+        along = (g.along0_m, float(g.along()[-1]))
+        across = g.lines()[[0, -1]] + 0.5 * g.line_step_m * np.array([-1.0, 1.0])
+        u, v = (np.ravel(a) for a in np.meshgrid(along, across))
+        corners.append(np.stack(draft.frame.forward(u, v) if g.direction == "x" else draft.frame.forward(v, u)))
+    every = np.concatenate(corners, axis=1)
+    (west, south), (east, north) = every.min(axis=1).tolist(), every.max(axis=1).tolist()
+    with found.collect():
+        check_cells((west, south, east, north), min(cells))
+
+
+def _set(survey: Survey, draft: Draft) -> SetOutlook:
+    g, there = draft.geometry, {e.row for e in draft.entries}
+    return SetOutlook(
+        name=draft.name,
+        lines=len(there),
+        direction=g.direction,
+        spacing_m=round(g.line_step_m, 3),
+        missing_m=tuple(round(float(at), 3) for row, at in enumerate(g.lines()) if row not in there),
+        longest_m=max(math.dist(e.start, e.end) for e in draft.entries),
+        trace_spacing_m=trace_spacing(draft.entries),
+        window_ns=float(np.median([f.interval_ns * f.n_samples for f in draft.facts])),
+        centre_frequency_mhz=draft.radar.centre_frequency_mhz,
+        velocity_m_per_ns=_velocities(survey),
     )
