@@ -80,7 +80,6 @@ def plan_of(names: tuple[str, ...], *, n_along: int = N_ALONG, last_trace: int |
         geometry=geometry,
         centre_frequency_ghz=0.4,
         separation_m=0.16,
-        interval_ns=STEP_NS,
         zero=Estimate(value=4.37, error=0.3, unit="ns", origin="measured", method="test"),
         velocity=Velocity.constant(0.09, 0.001, origin="given"),
         chain=tuple(StepSpec(name=n, version=1, params=SETTINGS[n]) for n in names),

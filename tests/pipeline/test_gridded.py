@@ -44,7 +44,6 @@ def one_set(name: str = "A/x", *, frame: Similarity | None = None, direction: st
         geometry=geometry,
         centre_frequency_ghz=0.4,
         separation_m=0.16,
-        interval_ns=0.3,
         zero=Estimate(value=6.0, error=0.2, unit="ns", origin="measured", method="test"),
         velocity=Velocity.constant(0.1, 0.005, origin="given"),
         chain=(),

@@ -55,7 +55,7 @@ def with_entry(plan: SetPlan, row: int, **changed: Any) -> SetPlan:
         lambda p: p.model_copy(update={"chain": (*p.chain[:-1], StepSpec(name="envelope", version=2))}),
         lambda p: p.model_copy(update={"windows_ns": p.windows_ns[:2]}),
         lambda p: p.model_copy(update={"geometry": p.geometry.model_copy(update={"time0_ns": -2.7})}),
-        lambda p: p.model_copy(update={"interval_ns": 0.31}),
+        lambda p: with_entry(p, 1, interval_ns=0.31),
         lambda p: p.model_copy(update={"reader": {"reader": "raw"}}),
     ],
 )

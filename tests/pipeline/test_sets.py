@@ -83,6 +83,27 @@ def test_one_short_file_costs_itself_only(site: Path, no_isosurface: None) -> No
     assert result.summary["slices"] == 3
 
 
+def test_a_cut_file_is_not_stretched(site: Path, no_isosurface: None) -> None:
+    """Half of a file: its traces stay where they were recorded, the other half of the line holds nothing."""
+    path = files(site)[2]
+    path.write_bytes(path.read_bytes()[: 3600 + 30 * (240 + 2 * 160) + 100])
+    plan = plan_site(site)
+    (entry,) = [e for e in plan.sets[0].entries if e.row == 2]
+    assert entry.last_trace == 29
+    assert abs(entry.end[0] - entry.start[0]) == pytest.approx(29 * 0.05)
+    told = [str(w) for w in map_site(site).warnings]
+    assert any("traces would lie 0.103 m apart" in t and "the file is cut" in t for t in told)
+
+
+def test_odd_trace_spacing_is_told_and_kept(site: Path, no_isosurface: None) -> None:
+    """A whole file on a line a third shorter than the others: perhaps true, perhaps a slip of the pen."""
+    rows(site, lambda i, row: row.update(end_x_m="2.0") if i == 2 else None)
+    result = map_site(site)
+    assert any("check start, end, first_trace" in str(w) for w in result.warnings)
+    plan, _ = read_run(result.out / "run.json")
+    assert next(e for e in plan.sets[0].entries if e.row == 2).end[0] == 2.0
+
+
 def test_two_visits_over_the_same_ground_are_refused(site: Path) -> None:
     """Interleaved days would make stripes, repeated ones would hide each other: refused by name."""
     survey(site, "[[grid]]", "[[visit]]\ndate = 2026-05-02\n\n[[grid]]")

@@ -68,7 +68,6 @@ def one_set(
         geometry=geometry,
         centre_frequency_ghz=0.4,
         separation_m=0.16,
-        interval_ns=0.3,
         zero=Estimate(value=6.0, error=0.25, unit="ns", origin="measured", method="envelope maximum less s/c"),
         velocity=velocity,
         chain=tuple(StepSpec(name=s, version=1, params={"window_ns": 5.1} if s == "dewow" else {}) for s in steps),
@@ -115,7 +114,7 @@ def test_each_slice_states_its_interval_and_error() -> None:
         assert (s.velocity_m_per_ns, s.velocity_error_m_per_ns) == (0.1, pytest.approx(0.002))
         assert s.velocity_origin == "measured: sharpest diffractions"
         assert (s.zero_rule, s.zero_error_ns) == ("envelope maximum less s/c", 0.25)
-        assert s.migration == "migrated in 2-D, line by line, at one velocity"
+        assert s.migration == "migrated in 2-D, line by line"
         assert s.line_spacing_m == 0.5
         assert s.resolution == "features narrower than 0.50 m between lines are not resolved"
         assert s.date == "2026-04-18"

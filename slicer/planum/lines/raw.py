@@ -10,7 +10,7 @@ import numpy as np
 from planum.errors import LineError, Problem, nearest
 from planum.lines import samples
 from planum.lines.interval import resolve_interval
-from planum.lines.recording import RawLayout, ReadOptions, Recording
+from planum.lines.recording import CUT, RawLayout, ReadOptions, Recording
 
 __all__ = ["READER", "RawPreview", "RawReader", "preview"]
 
@@ -157,7 +157,7 @@ def _left_over(file: str, layout: RawLayout, kind: np.dtype, n_traces: int, left
         do="the file is cut, or the declared layout does not fit: look at a preview",
         file=file,
         byte=layout.header_bytes + n_traces * kind.itemsize,
-        key="layout",
+        key=CUT,
         severity="warning",
     )
 

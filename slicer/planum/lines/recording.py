@@ -11,9 +11,13 @@ import xarray as xr
 from planum.errors import Problem
 from planum.schema import LINE_DIMS
 
-__all__ = ["IntervalUnit", "RawLayout", "ReadOptions", "Recording"]
+__all__ = ["CUT", "IntervalUnit", "RawLayout", "ReadOptions", "Recording"]
 
 IntervalUnit = Literal["ps", "ns", "us"]
+
+
+CUT = "file length"
+"""Key of the warning that a file ends in the middle: its last trace is not the end of the line."""
 
 
 @dataclass(frozen=True)

@@ -12,6 +12,7 @@ from typing import BinaryIO
 
 from planum.errors import LineError, Problem
 from planum.lines import segy_format as fmt
+from planum.lines.recording import CUT
 from planum.lines.segy_format import FILE, FORMATS, HEAD, TEXT, TRACE, TRACE_HEAD
 
 __all__ = ["SegyLayout", "byte_order", "find_layout"]
@@ -97,8 +98,8 @@ class _Finder:
     def error(self, came: str, byte: int, *, allowed: str = "", do: str = "") -> LineError:
         return LineError(Problem(came=came, allowed=allowed, do=do, file=self.name, byte=byte))
 
-    def warn(self, came: str, byte: int, *, do: str = "") -> None:
-        self.problems.append(Problem(came=came, do=do, file=self.name, byte=byte, severity="warning"))
+    def warn(self, came: str, byte: int, *, do: str = "", key: str = "") -> None:
+        self.problems.append(Problem(came=came, do=do, file=self.name, byte=byte, key=key, severity="warning"))
 
     def get(self, name: str) -> int:
         return int(FILE[name].get(self.head, self.order))
@@ -249,7 +250,7 @@ class _Finder:
             raise self.error(f"no whole trace of {size} bytes after byte {first}", first)
         if declared > n or rest:
             lost = f"{declared - n} of {declared} traces are missing" if declared > n else "its last trace is cut"
-            self.warn(f"file cut: {lost}; {n} whole traces kept, {rest} bytes left over", first + n * size)
+            self.warn(f"file cut: {lost}; {n} whole traces kept, {rest} bytes left over", first + n * size, key=CUT)
         elif declared and declared < n:
             self.warn(f"{declared} traces declared, {n} found and kept", FILE["n_traces"].byte)
         return n, declared or None

@@ -12,6 +12,7 @@ import numpy as np
 
 from planum.cube.geometry import cube_geometry, line_direction, place_rows
 from planum.errors import Problem, SurveyError
+from planum.lines.recording import CUT
 from planum.pipeline.estimate import Line, TimeZero, balance, time_zero
 from planum.records import CubeGeometry, Estimate, Facts, LineEntry, Similarity
 from planum.survey.config import Grid, Radar
@@ -22,6 +23,7 @@ __all__ = ["Draft", "draft_sets"]
 MOST_SAMPLES = 500_000_000
 """Samples of one line on its cube: beyond it a spacing is mistyped."""
 LEAST_SAMPLES = 8
+SPACING_TOLERANCE = 0.1
 REACHED_BY = 0.8
 """Share of a set's lines that must reach its last sample; shorter recordings are set aside."""
 
@@ -150,6 +152,7 @@ def _draft(
         e.model_copy(update={"because": (*e.because, "time zero")}) if z != zero.estimate.value else e
         for e, z in zip(entries, zero.zeros, strict=True)
     ]
+    entries = _unstretched(entries, lines, warnings)
     dt = float(np.median([line.facts.interval_ns for line in lines]))
     period = 1e3 / radar.centre_frequency_mhz
     before = max(0, min(math.floor(min(zero.zeros) / dt + 1e-9), math.ceil(1.5 * period / dt)))
@@ -182,6 +185,39 @@ def _draft(
         "reader": lines[0].source.options.reader,
     }
     return Draft(name, tuple(lines), radar, placed, geometry, zero.estimate, frames[grid.name], reader)
+
+
+def _unstretched(entries: Sequence[LineEntry], lines: Sequence[Line], warnings: list[Problem]) -> list[LineEntry]:
+    """Keep the traces of a cut file at their places instead of stretching them over the whole line, and tell it.
+
+    The set's median trace spacing tells where the last trace lies. A whole file whose spacing is a tenth or more off
+    stays as the register says, and is told.
+    """
+    gaps = np.array([math.dist(e.start, e.end) / max(1, e.last_trace - e.first_trace) for e in entries])
+    usual = float(np.median(gaps))
+    out = list(entries)
+    for i, (e, line, gap) in enumerate(zip(entries, lines, gaps, strict=True)):
+        if line.header or abs(gap / usual - 1.0) <= SPACING_TOLERANCE:
+            continue
+        cut = gap > usual and any(p.get("key") == CUT for p in line.facts.problems)
+        if cut:
+            (x0, y0), (x1, y1), share = e.start, e.end, usual / gap
+            out[i] = e.model_copy(
+                update={"end": (x0 + share * (x1 - x0), y0 + share * (y1 - y0)), "because": (*e.because, "file cut")}
+            )
+        warnings.append(
+            Problem(
+                came=f"traces would lie {gap:.3f} m apart, on the other lines they lie {usual:.3f} m apart",
+                allowed="the same spacing on all lines of a set, within a tenth",
+                do="the file is cut: its traces are placed from the start on, the rest of the line stays empty"
+                if cut
+                else "check start, end, first_trace and last_trace in the register",
+                file=e.file,
+                line=e.line,
+                severity="warning",
+            )
+        )
+    return out
 
 
 def _after_zero(lines: Sequence[Line], zero: TimeZero) -> list[float]:

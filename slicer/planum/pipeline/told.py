@@ -82,7 +82,7 @@ class RunFacts:
 def statements(plan: Plan, stack: xr.Dataset, stretch: Stretch) -> tuple[Statement, ...]:
     """Return one statement per slice; where sets differ the least certain speaks."""
     s = max(plan.sets, key=lambda one: one.velocity.error / one.velocity.value)
-    at = migration_velocity(s)
+    migrated, at = any(step.name == "migrate" for step in s.chain), migration_velocity(s)
     spacing = max(one.geometry.line_step_m for one in plan.sets)
     date = ", ".join(sorted({one.visit for one in plan.sets if one.visit})) or "not stated"
     name = key(plan)
@@ -100,7 +100,9 @@ def statements(plan: Plan, stack: xr.Dataset, stretch: Stretch) -> tuple[Stateme
             zero_error_ns=s.zero.error,
             surface="the ground surface as walked",
             date=date,
-            migration="not migrated" if at is None else f"migrated in 2-D, line by line, at {at:.4g} m/ns",
+            migration=f"migrated in 2-D, line by line{f', at {at:.4g} m/ns' if at else ''}"
+            if migrated
+            else "not migrated",
             fill=FILL,
             line_spacing_m=spacing,
             coverage_rule=COVERAGE_RULE,
