@@ -138,7 +138,7 @@ def assert_same(read: dict[str, Any], want: dict[str, Any]) -> None:
 
 
 @pytest.mark.parametrize(
-    "recipe", [{}, {"steps": ["dewow", "background", "envelope"], "background": {"scope": "line"}}]
+    "recipe", [{}, {"steps": ["dewow", "background", "envelope"], "background": {"scope": "line", "window_m": 4.0}}]
 )
 def test_text_is_toml_and_lists_every_number(recipe: dict[str, Any]) -> None:
     """What a TOML reader finds is the chain, every scalar to the six figures written."""

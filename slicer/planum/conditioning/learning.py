@@ -9,10 +9,13 @@ import numpy as np
 __all__ = [
     "ABSORPTION_MOST",
     "BLOCK_LINES",
+    "LINES_TO_TELL",
     "Corners",
     "absorption",
     "band_corners",
+    "fade_out",
     "gain_span",
+    "noise_is_seen",
     "typical_blocks",
 ]
 
@@ -21,6 +24,15 @@ ABSORPTION_MOST = 1.0
 
 BLOCK_LINES = 21
 """Lines in a sliding block: a wall under 3 of them is a seventh, which a median does not follow."""
+
+LINES_TO_TELL = 15
+"""With fewer lines a wall along them, and its flanks on the lines beside, is too large a share for a median to ignore:
+3 of 15 are a fifth."""
+
+_LATE = 0.25
+_FLAT, _FLAT_DB = 0.5, 1.0
+"""The last quarter of a record is flat when its level moves by less than half of what decay and spreading would make of
+it, or by less than 1 dB: then it is noise. Still falling, it is ground, and the noise was not recorded."""
 
 _ONE_BLOCK = 30
 _BOUNDS = (0.25, 2.5)
@@ -67,6 +79,32 @@ def gain_span(envelope: np.ndarray, noise: float, time_ns: np.ndarray, *, start_
     return float(time_ns[-1])
 
 
+def noise_is_seen(
+    envelope: np.ndarray, time_ns: np.ndarray, *, power: float, start_ns: float, period_ns: float
+) -> bool:
+    """Tell whether the end of the record is noise: its level has stopped falling.
+
+    The decay is fitted on the first three quarters after ``start_ns``, spreading removed, and continued over the last
+    quarter; noise is there when the last quarter moves by less than half of that. False when there is too little of
+    either to tell.
+    """
+    time = np.asarray(time_ns, float)
+    border = time[-1] - _LATE * (time[-1] - start_ns)
+    fitted = absorption(
+        envelope, 0.0, time, power=power, span_ns=(start_ns, float(border)), period_ns=period_ns, most=np.inf
+    )
+    smooth = _median(np.asarray(envelope, float), max(round(period_ns / (time[1] - time[0])) | 1, 3))
+    late = (time > border) & (smooth > 0)
+    if fitted is None or late.sum() < 5:
+        return False
+    t = time[late]
+    every = max(1, t.size // 100)
+    length = t[-1] - t[0]
+    fall = -length * _slope(t[::every], 20.0 * np.log10(smooth[late][::every]))
+    expected = fitted * length + 20.0 * power * np.log10(t[-1] / t[0])
+    return bool(abs(fall) < max(_FLAT * expected, _FLAT_DB))
+
+
 def absorption(
     envelope: np.ndarray,
     noise: float,
@@ -75,11 +113,12 @@ def absorption(
     power: float,
     span_ns: tuple[float, float],
     period_ns: float,
-) -> float:
+    most: float = ABSORPTION_MOST,
+) -> float | None:
     """Return the absorption in dB/ns from the decay of the median envelope, spreading removed.
 
     Noise power is subtracted; the slope is the median of all pairwise slopes (Theil 1950, Sen 1968, from memory) of
-    points half a period apart, bounded to 0..ABSORPTION_MOST. With fewer than 5 points it is 0: nothing is measured.
+    points half a period apart, bounded to 0..``most``. None with fewer than 5 points: nothing is measured.
     """
     step = float(time_ns[1] - time_ns[0])
     every = max(round(period_ns / 2.0 / step), 1)
@@ -88,12 +127,16 @@ def absorption(
     signal = smooth[pick] ** 2 - noise**2
     pick, signal = pick[signal > 0], signal[signal > 0]
     if pick.size < 5:
-        return 0.0
+        return None
     t = time_ns[pick]
     level = 10.0 * np.log10(signal) + 20.0 * power * np.log10(t)
-    i, j = np.triu_indices(t.size, 1)
-    slope = float(np.median((level[j] - level[i]) / (t[j] - t[i])))
-    return float(np.clip(-slope, 0.0, ABSORPTION_MOST))
+    return float(np.clip(-_slope(t, level), 0.0, most))
+
+
+def fade_out(time_ns: np.ndarray, start_ns: float, stop_ns: float) -> np.ndarray:
+    """Return 1 up to ``start_ns``, 0 from ``stop_ns`` on, half a cosine between."""
+    share = (np.asarray(time_ns, float) - start_ns) / (stop_ns - start_ns)
+    return 0.5 + 0.5 * np.cos(np.pi * np.clip(share, 0.0, 1.0))
 
 
 def band_corners(spectrum: np.ndarray, step_ghz: float, *, nominal_ghz: float, nyquist_ghz: float) -> Corners:
@@ -158,6 +201,12 @@ def _falls(level: np.ndarray, f: np.ndarray, peak: int, share: float, way: int) 
         return float(f[i])
     back = i - way
     return float(f[i] + (f[back] - f[i]) * (share - level[i]) / max(level[back] - level[i], 1e-30))
+
+
+def _slope(t: np.ndarray, level: np.ndarray) -> float:
+    """Return the median of all pairwise slopes."""
+    i, j = np.triu_indices(t.size, 1)
+    return float(np.median((level[j] - level[i]) / (t[j] - t[i])))
 
 
 def _median(values: np.ndarray, window: int) -> np.ndarray:

@@ -7,18 +7,18 @@ plan then holds, so that the second pass estimates nothing.
 from __future__ import annotations
 
 import math
-from typing import Any, Literal
+from typing import Any, Literal, Self
 
 import numpy as np
 import xarray as xr
-from pydantic import Field
+from pydantic import Field, model_validator
 
 from planum.conditioning import learning
 from planum.conditioning.background import background
 from planum.conditioning.bandpass import bandpass
 from planum.conditioning.dewow import dewow, odd_window
 from planum.conditioning.gain import gain
-from planum.errors import Problem
+from planum.errors import Problem, RecipeError
 from planum.records import Quantity, Record, SetFacts
 
 __all__ = ["BACKGROUND", "BANDPASS", "DEWOW", "GAIN", "Background", "Bandpass", "Dewow", "Gain"]
@@ -29,6 +29,11 @@ _PULSE_PERIODS = 1.5
 """Length of a radar pulse in periods of its centre frequency (common practice; a Ricker wavelet has 1.5 visible)."""
 
 _DEWOW_PERIODS = 2.0
+
+
+def _direct_ns(facts: SetFacts, periods: float) -> float:
+    """Return the time ``periods`` of the centre frequency after the direct ground wave, ns."""
+    return facts.separation_m / facts.velocity.value + periods / facts.centre_frequency_ghz
 
 
 class DewowParams(Record):
@@ -66,7 +71,22 @@ class GainParams(Record):
     power: float = Field(1.0, ge=0, le=4, description="exponent of the spreading law")
     absorption_db_per_ns: float | None = Field(None, ge=0, description="automatic: measured on the median envelope")
     start_ns: float | None = Field(None, gt=0, description="automatic: end of the direct wave")
-    stop_ns: float | None = Field(None, gt=0, description="automatic: where the envelope meets twice the noise")
+    stop_ns: float | None = Field(
+        None, gt=0, description="automatic: where the envelope meets twice the noise, or the record's end"
+    )
+
+    @model_validator(mode="after")
+    def _in_order(self) -> Self:
+        if self.start_ns is not None and self.stop_ns is not None and self.start_ns > self.stop_ns:
+            raise RecipeError(
+                Problem(
+                    came=f"start_ns is {self.start_ns:g} and stop_ns {self.stop_ns:g}",
+                    allowed="a stop not before the start",
+                    do="exchange them, or leave one out: it is then found from the survey",
+                    key="start_ns",
+                )
+            )
+        return self
 
 
 class Gain:
@@ -80,30 +100,84 @@ class Gain:
     Params = GainParams
 
     def learn(self, facts: SetFacts, params: GainParams) -> GainParams:
-        """Start after the direct ground wave and its pulse, stop at twice the noise, absorption in between."""
-        g = facts.geometry
-        period = 1.0 / facts.centre_frequency_ghz
-        time = g.times()
-        start = params.start_ns
-        if start is None:
-            start = facts.separation_m / facts.velocity.value + _PULSE_PERIODS * period
-            start = max(min(start, float(time[-1])), g.time_step_ns)
-        envelope = np.asarray(facts.envelope, float)
-        stop = params.stop_ns
-        if stop is None:
-            stop = learning.gain_span(envelope, facts.noise, time, start_ns=start, period_ns=period)
-        stop = max(stop, start)
-        loss = params.absorption_db_per_ns
-        if loss is None:
-            loss = learning.absorption(
-                envelope, facts.noise, time, power=params.power, span_ns=(start, stop), period_ns=period
-            )
+        """Start after the direct ground wave and its pulse, stop at twice the noise, absorption in between.
+
+        Where the record ends before the noise begins, the gain goes on to its end.
+        """
+        start, stop, loss = self._found(facts, params, most=learning.ABSORPTION_MOST)
         found = {"start_ns": round(start, 6), "stop_ns": round(stop, 6), "absorption_db_per_ns": round(loss, 9)}
         return params.model_copy(update=found)
+
+    def limit_ns(self, facts: SetFacts, params: GainParams) -> float | None:
+        """Return the time where the envelope meets twice the noise, or None where the noise was not reached."""
+        limit = self._meets(facts, params)
+        return None if limit is None or limit >= facts.geometry.times()[-1] else round(limit, 6)
+
+    def notes(self, facts: SetFacts, params: GainParams) -> tuple[Problem, ...]:
+        """Say when the record ends above the noise, and when the decay is steeper than ground can be."""
+        problems = []
+        if self.limit_ns(facts, params) is None:
+            problems.append(
+                Problem(
+                    came=f"at the end of the record, {facts.geometry.times()[-1]:.1f} ns, the signal is still falling:"
+                    " where noise begins is not known",
+                    do="no limit of depth is stated; a longer window would show it",
+                    key="recipe.gain.stop_ns",
+                    severity="note",
+                )
+            )
+        most = learning.ABSORPTION_MOST
+        if params.absorption_db_per_ns is None and self._found(facts, params, most=math.inf)[2] > most:
+            loss = self._found(facts, params, most=math.inf)[2]
+            problems.append(
+                Problem(
+                    came=f"the signal falls by {loss:.2f} dB/ns besides spreading, the gain makes up for {most:g}",
+                    allowed=f"up to {most:g} dB/ns, which wet clay takes",
+                    do="late slices are darker than the ground; look for a recording that was cut or muted, a window"
+                    " that is too short, or give absorption_db_per_ns",
+                    key="recipe.gain.absorption_db_per_ns",
+                    severity="warning",
+                )
+            )
+        return tuple(problems)
 
     def __call__(self, cube: xr.DataArray, **params: Any) -> xr.DataArray:
         """See :func:`planum.conditioning.gain.gain`."""
         return gain(cube, **params)
+
+    @staticmethod
+    def _start(facts: SetFacts, params: GainParams) -> float:
+        if params.start_ns is not None:
+            return params.start_ns
+        last = params.stop_ns or float(facts.geometry.times()[-1])
+        return max(min(_direct_ns(facts, _PULSE_PERIODS), last), min(facts.geometry.time_step_ns, last))
+
+    def _meets(self, facts: SetFacts, params: GainParams) -> float | None:
+        """Return where the envelope meets twice the noise; None when the record's end is no noise."""
+        period = 1.0 / facts.centre_frequency_ghz
+        time, start = facts.geometry.times(), self._start(facts, params)
+        envelope = np.asarray(facts.envelope, float)
+        if not learning.noise_is_seen(envelope, time, power=params.power, start_ns=start, period_ns=period):
+            return None
+        return learning.gain_span(envelope, facts.noise, time, start_ns=start, period_ns=period)
+
+    def _found(self, facts: SetFacts, params: GainParams, *, most: float) -> tuple[float, float, float]:
+        """Return start, stop and absorption."""
+        start, meets = self._start(facts, params), self._meets(facts, params)
+        time = facts.geometry.times()
+        stop = max(params.stop_ns or (float(time[-1]) if meets is None else meets), start)
+        loss = params.absorption_db_per_ns
+        if loss is None:
+            loss = learning.absorption(
+                np.asarray(facts.envelope, float),
+                0.0 if meets is None else facts.noise,
+                time,
+                power=params.power,
+                span_ns=(start, stop),
+                period_ns=1.0 / facts.centre_frequency_ghz,
+                most=most,
+            )
+        return start, stop, loss or 0.0
 
 
 class BandpassParams(Record):
@@ -113,6 +187,25 @@ class BandpassParams(Record):
     low_pass_ghz: float | None = Field(None, gt=0)
     high_pass_ghz: float | None = Field(None, gt=0)
     high_stop_ghz: float | None = Field(None, gt=0)
+
+    @model_validator(mode="after")
+    def _in_order(self) -> Self:
+        given = {k: v for k, v in self.model_dump().items() if v is not None}
+        if list(given.values()) != sorted(set(given.values())):
+            raise _not_ascending(given)
+        return self
+
+
+def _not_ascending(corners: dict[str, float], given: dict[str, float] | None = None) -> RecipeError:
+    typed = "" if given is None else f", of which {', '.join(given)} typed"
+    return RecipeError(
+        Problem(
+            came=f"corner frequencies {', '.join(f'{k} = {v:g}' for k, v in corners.items())}{typed}",
+            allowed="low_stop_ghz < low_pass_ghz < high_pass_ghz < high_stop_ghz, from 0",
+            do="put them in order, or leave some out: they are then found from the survey",
+            key="recipe.bandpass." + next(iter(given or corners)),
+        )
+    )
 
 
 class Bandpass:
@@ -129,14 +222,19 @@ class Bandpass:
         """Corners from the spectrum; a corner that was given stays."""
         found = dict(zip(self._names(), self._corners(facts)[:4], strict=True))
         given = {k: v for k, v in params.model_dump().items() if v is not None}
-        return params.model_copy(update={**found, **given})
+        corners = {**found, **given}
+        if list(corners.values()) != sorted(set(corners.values())):
+            raise _not_ascending(corners, given)
+        return params.model_copy(update=corners)
 
     def notes(self, facts: SetFacts, params: BandpassParams) -> tuple[Problem, ...]:
         """Return a note when the nominal band had to stand in for the measured one."""
         corners = self._corners(facts)
         if not corners.note or all(v is not None for v in params.model_dump().values()):
             return ()
-        return (Problem(corners.note, do="band-pass from the nominal frequency", key="bandpass", severity="note"),)
+        return (
+            Problem(corners.note, do="band-pass from the nominal frequency", key="recipe.bandpass", severity="note"),
+        )
 
     def __call__(self, cube: xr.DataArray, **params: Any) -> xr.DataArray:
         """See :func:`planum.conditioning.bandpass.bandpass`."""
@@ -164,6 +262,28 @@ class BackgroundParams(Record):
     at_m: tuple[float, ...] | None = Field(None, description="positions of the traces across the lines, m")
     window_m: float | None = Field(None, gt=0, description='running mean along the line, m; only for scope "line"')
 
+    @model_validator(mode="after")
+    def _whole(self) -> Self:
+        if self.scope == "line" and self.window_m is None:
+            raise RecipeError(
+                Problem(
+                    came='scope is "line" without window_m',
+                    allowed="a length in m, over which the mean along the line is taken",
+                    do='give window_m, longer than any wall that should stay, or scope "set"',
+                    key="window_m",
+                )
+            )
+        if len(self.traces or ()) != len(self.at_m or ()):
+            raise RecipeError(
+                Problem(
+                    came=f"{len(self.traces or ())} traces at {len(self.at_m or ())} places",
+                    allowed="one place in at_m for every trace",
+                    do="leave both out: they are then found from the survey",
+                    key="traces",
+                )
+            )
+        return self
+
 
 class Background:
     """The step ``background``: what the whole set has in common is taken off, walls along the lines stay."""
@@ -176,23 +296,62 @@ class Background:
     Params = BackgroundParams
 
     def learn(self, facts: SetFacts, params: BackgroundParams) -> BackgroundParams:
-        """Median typical trace of sliding blocks of lines, as they arrive at this step."""
+        """Median typical trace of sliding blocks of lines, as they arrive at this step.
+
+        Fewer than 15 lines do not tell ringing from a wall along them: then the direct wave alone is taken off.
+        """
         if params.scope == "line" or params.traces is not None:
             return params
-        typical = facts.typical.isel(along=0).transpose("line", "time")
-        rows = np.asarray(typical.values, float)
+        rows, line_m = self._rows(facts)
         use = np.isfinite(rows).all(axis=1) & rows.any(axis=1)  # a row of nothing but zeros was not recorded
         if not use.any():
             none = tuple(0.0 for _ in range(rows.shape[1]))
             return params.model_copy(update={"traces": (none,), "at_m": (0.0,)})
-        blocks, at = learning.typical_blocks(rows[use], typical["line"].values[use])
+        blocks, at = learning.typical_blocks(rows[use], line_m[use])
+        if self._lines(facts) < learning.LINES_TO_TELL:
+            blocks = blocks * learning.fade_out(facts.geometry.times(), *self._direct_zone(facts))
         digits = 7 - math.ceil(math.log10(max(float(np.abs(blocks).max()), 1e-30)))
         traces = tuple(tuple(round(float(v), digits) for v in b) for b in blocks)  # float32 holds no more digits
         return params.model_copy(update={"traces": traces, "at_m": tuple(round(float(a), 6) for a in at)})
 
+    def notes(self, facts: SetFacts, params: BackgroundParams) -> tuple[Problem, ...]:
+        """Say when there are too few lines to tell ringing from a wall along them."""
+        lines = self._lines(facts)
+        if params.scope == "line" or params.traces is not None or lines >= learning.LINES_TO_TELL:
+            return ()
+        end = self._direct_zone(facts)[1]
+        count = "1 line does" if lines == 1 else f"{lines} lines do"
+        return (
+            Problem(
+                came=f"{count} not tell ringing from a wall along the lines: below {end:.1f} ns nothing is taken off",
+                allowed=f"{learning.LINES_TO_TELL} lines or more in a set",
+                do="ringing of the antennas stays and shows as even bands in every section, even brightness in slices;"
+                ' record more lines, or take scope = "line" with window_m where nothing runs along the lines',
+                key="recipe.background",
+                severity="warning",
+            ),
+        )
+
     def __call__(self, cube: xr.DataArray, **params: Any) -> xr.DataArray:
         """See :func:`planum.conditioning.background.background`."""
         return background(cube, **params)
+
+    @staticmethod
+    def _rows(facts: SetFacts) -> tuple[np.ndarray, np.ndarray]:
+        """Typical traces (row, time) and their places across, m; pieces of one line are rows of their own."""
+        typical = facts.typical.isel(along=0).transpose("line", "time")
+        return np.asarray(typical.values, float), np.asarray(typical["line"].values, float)
+
+    def _lines(self, facts: SetFacts) -> int:
+        """Return how many lines were recorded, pieces of one line counted once."""
+        rows, line_m = self._rows(facts)
+        place = np.round((line_m - facts.geometry.line0_m) / facts.geometry.line_step_m)
+        return int(np.unique(place[rows.any(axis=1)]).size)
+
+    @staticmethod
+    def _direct_zone(facts: SetFacts) -> tuple[float, float]:
+        """Where the direct wave's zone begins and has ended to fade, ns; two periods after its arrival it is half."""
+        return _direct_ns(facts, _PULSE_PERIODS), _direct_ns(facts, _PULSE_PERIODS + 1.0)
 
 
 DEWOW = Dewow()

@@ -35,6 +35,7 @@ from planum.schema import regular_step
 __all__ = [
     "StoltTable",
     "alias_free_dip_deg",
+    "check_settings",
     "edge_weights",
     "mark_rim",
     "rim_m",
@@ -162,7 +163,7 @@ def stolt(
     -----
     Line by line means in two dimensions: what lies beside a line is imaged at its slant distance.
     """
-    _check(velocity_m_per_ns, max_dip_deg, dip_taper_deg, edge_taper_m, highest_ghz)
+    check_settings(velocity_m_per_ns, max_dip_deg, dip_taper_deg, edge_taper_m, highest_ghz)
     along, time = cube["along"].values, cube["time"].values
     step = regular_step(along, name="along")
     shape = (along.size, time.size, step, regular_step(time, name="time"), float(time[0]))
@@ -384,7 +385,14 @@ def _migrate_block(
     return out
 
 
-def _check(velocity: float, max_dip: float, dip_taper: float, edge_taper: float, highest: float | None) -> None:
+def check_settings(velocity: float, max_dip: float, dip_taper: float, edge_taper: float, highest: float | None) -> None:
+    """Refuse impossible settings of :func:`stolt`, in the order they stand there.
+
+    Raises
+    ------
+    RecipeError
+        With one problem for each.
+    """
     low, high = VELOCITY_RANGE
     checks: dict[str, tuple[bool, float | None, str]] = {
         "velocity_m_per_ns": (low <= velocity <= high, velocity, f"{low} to {high} m/ns"),
@@ -394,7 +402,12 @@ def _check(velocity: float, max_dip: float, dip_taper: float, edge_taper: float,
         "highest_ghz": (highest is None or 0 < highest < math.inf, highest, "above 0"),
     }
     problems = [
-        Problem(came=f"{name} = {came!r}", allowed=f"allowed: {allowed}", key=f"recipe.migrate.{name}")
+        Problem(
+            came=f"{name} = {came!r}",
+            allowed=f"allowed: {allowed}",
+            do="mend the value, or leave it out",
+            key=f"recipe.migrate.{name}",
+        )
         for name, (good, came, allowed) in checks.items()
         if not good
     ]

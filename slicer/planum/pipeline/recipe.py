@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import json
 import re
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import replace
 from typing import Any
 
@@ -16,13 +16,15 @@ from pydantic import BaseModel, ValidationError
 
 from planum.engine.steps import check_order, find_steps, get_step
 from planum.errors import Problem, RecipeError, nearest
-from planum.records import SetFacts, StepSpec
+from planum.records import SetFacts, Step, StepSpec
 from planum.survey.config import DEFAULT_STEPS
 
-__all__ = ["resolve_chain", "settings", "settings_text", "toml"]
+__all__ = ["chain_notes", "limit_ns", "resolve_chain", "settings", "settings_text", "toml"]
 
 
-def settings(recipe: Mapping[str, Any], *, file: str = "survey.toml") -> dict[str, BaseModel]:
+def settings(
+    recipe: Mapping[str, Any], *, file: str = "survey.toml", centre_ghz: Sequence[float] = ()
+) -> dict[str, BaseModel]:
     """Return the recipe's steps in order with their settings checked.
 
     Parameters
@@ -31,6 +33,8 @@ def settings(recipe: Mapping[str, Any], *, file: str = "survey.toml") -> dict[st
         ``steps`` and one table per step, as written in the survey.
     file : str
         Named in messages.
+    centre_ghz : sequence of float
+        Centre frequencies of the survey's antennas, GHz: settings that cannot be right for them are refused too.
 
     Raises
     ------
@@ -65,23 +69,29 @@ def settings(recipe: Mapping[str, Any], *, file: str = "survey.toml") -> dict[st
         try:
             out[name] = model.model_validate(tables.get(name, {}))
         except ValidationError as fault:
-            problems += [_problem(e, name, model, file) for e in fault.errors()]
+            problems += [p for e in fault.errors() for p in _problems(e, name, model, file)]
+            continue
+        refused = getattr(installed[name], "refused", None)
+        if refused is not None:
+            found = [refused(out[name], centre_ghz=centre) for centre in sorted(set(centre_ghz))]
+            problems += [replace(p, file=file) for some in found for p in some]
     if problems:
         raise RecipeError(problems)
     return out
 
 
-def _problem(error: Any, step: str, model: type[BaseModel], file: str) -> Problem:
+def _problems(error: Any, step: str, model: type[BaseModel], file: str) -> list[Problem]:
     key = ".".join([f"recipe.{step}", *(str(p) for p in error["loc"])])
+    own = error.get("ctx", {}).get("error")
+    if isinstance(own, RecipeError):  # a step's own check, which says more than a type can
+        prefix = f"recipe.{step}."
+        return [replace(p, file=file, key=prefix + p.key.removeprefix(prefix)) for p in own.problems]
     if error["type"] == "extra_forbidden":
-        return Problem(
-            came=f"unknown setting {error['loc'][-1]!r}",
-            allowed=nearest(str(error["loc"][-1]), model.model_fields),
-            do="mend the name",
-            file=file,
-            key=key,
-        )
-    return Problem(came=f"{error['msg']} (got {error['input']!r})", do="mend the value", file=file, key=key)
+        allowed = nearest(str(error["loc"][-1]), model.model_fields)
+        return [
+            Problem(f"unknown setting {error['loc'][-1]!r}", allowed=allowed, do="mend the name", file=file, key=key)
+        ]
+    return [Problem(came=f"{error['msg']} (got {error['input']!r})", do="mend the value", file=file, key=key)]
 
 
 def resolve_chain(
@@ -91,18 +101,50 @@ def resolve_chain(
 
     Each step learns from the typical traces as they arrive at it. ``until`` stops before the step of that name.
     """
-    chain: list[StepSpec] = []
+    return tuple(spec for _, spec, _ in _walk(chosen, facts, until))
+
+
+def chain_notes(chosen: Mapping[str, BaseModel], facts: SetFacts, *, until: str | None = None) -> tuple[Problem, ...]:
+    """Return what the steps have to say about a set: what could not be learned, and what that means.
+
+    Parameters and order as for :func:`resolve_chain`; a step speaks when it has ``notes(facts, params)``, of the typed
+    settings and the facts as they arrive at it.
+    """
+    out: list[Problem] = []
+    for step, spec, known in _walk(chosen, facts, until):
+        notes = getattr(step, "notes", None)
+        if notes is not None:
+            out += notes(known, chosen[spec.name])
+    return tuple(out)
+
+
+def limit_ns(chosen: Mapping[str, BaseModel], facts: SetFacts) -> float | None:
+    """Return the two-way time from which on a set holds noise, ns; None where it was not reached or no step knows.
+
+    It is measured, whatever stop was typed for the gain.
+    """
+    for name, wanted in chosen.items():
+        limit = getattr(get_step(name), "limit_ns", None)
+        if limit is not None:
+            found = limit(facts, wanted)
+            return None if found is None else float(found)
+    return None
+
+
+def _walk(
+    chosen: Mapping[str, BaseModel], facts: SetFacts, until: str | None
+) -> Iterator[tuple[Step, StepSpec, SetFacts]]:
+    """Yield every step, resolved, with the facts as they arrive at it."""
     for name, wanted in chosen.items():
         if name == until:
-            break
+            return
         step = get_step(name)
         learn = getattr(step, "learn", None)
         params = wanted if learn is None else learn(facts, wanted)
         spec = StepSpec(name=name, version=step.version, params=params.model_dump(mode="json"))
-        chain.append(spec)
+        yield step, spec, facts
         if step.reach == "trace" and step.gives == "voltage":
             facts = replace(facts, typical=step(facts.typical, **spec.params))
-    return tuple(chain)
 
 
 def toml(chain: Sequence[StepSpec]) -> str:
