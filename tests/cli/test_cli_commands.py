@@ -15,6 +15,7 @@ from PIL import Image
 
 from planum.errors import MachineError, Problem
 from planum.lines.segy_write import write_segy
+from planum.outputs import look as look_picture
 from planum.pipeline.run import RunResult
 from planum.records import StepSpec
 from planum_cli.commands import demo
@@ -46,6 +47,32 @@ def write_lines(folder: Path, count: int = 3) -> Path:
         data = rng.integers(-2000, 2000, (21, 128)).astype(np.int16)
         write_segy(folder / f"L{number}.sgy", data, interval_ns=0.25, text=("A TEST LINE",))
     return folder
+
+
+def write_empty_interval(path: Path) -> None:
+    """Write a line whose interval fields are empty: bytes 3217, 3219, and 117 of each trace (SEG-Y rev 1)."""
+    path.parent.mkdir(parents=True, exist_ok=True)
+    data = np.random.default_rng(3).integers(-2000, 2000, (21, 128)).astype(np.int16)
+    write_segy(path, data, interval_ns=0.25)
+    content = bytearray(path.read_bytes())
+    content[3216:3220] = bytes(4)
+    for trace in range(3600, len(content), 240 + 2 * 128):
+        content[trace + 116 : trace + 118] = bytes(2)
+    path.write_bytes(content)
+
+
+@pytest.fixture
+def written(monkeypatch: pytest.MonkeyPatch) -> list[str]:
+    """Return the texts that reach the picture of `look`; they are drawn as well."""
+    texts: list[str] = []
+    draw = look_picture.write_text
+
+    def keep(picture: Image.Image, at: tuple[float, float], text: str, *args: object, **named: object) -> None:
+        texts.append(text)
+        draw(picture, at, text, *args, **named)  # type: ignore[arg-type]
+
+    monkeypatch.setattr(look_picture, "write_text", keep)
+    return texts
 
 
 @pytest.fixture
@@ -194,12 +221,85 @@ def test_check_counts_gaps_and_states_the_resolution(site: Path) -> None:
     assert "nearer than 1 m run together" in done.stdout
 
 
-def test_look_needs_the_unit_and_says_how_to_give_it(stick: Path, tmp_path: Path) -> None:
-    """The unit is not guessed silently; the cure is an option of this command."""
+def test_look_guesses_the_unit_aloud(stick: Path, tmp_path: Path, written: list[str]) -> None:
+    """250 over 128 samples is a window of 32 ns in ps alone; terminal, facts and picture call it guessed."""
     done = run("look", stick / "L1.sgy", "--picture", tmp_path / "a.png")
+    assert done.exit_code == 0, done.stderr
+    assert "unit guessed: ps;" in done.stderr
+    assert "0.25 ns (unit guessed: ps)" in done.stdout
+    assert "unit guessed: ps" in " ".join(" ".join(written).split())
+
+
+def test_look_refuses_a_file_whose_interval_nobody_knows(tmp_path: Path) -> None:
+    """An interval field of 0 leaves nothing to guess from; the cure is an option of this command."""
+    write_empty_interval(tmp_path / "a.sgy")
+    done = run("look", tmp_path / "a.sgy", "--picture", tmp_path / "a.png")
     assert done.exit_code == 3
-    assert "--unit ps" in done.stderr
+    assert "--interval-ns" in done.stderr
     assert not (tmp_path / "a.png").exists()
+
+
+@pytest.mark.parametrize("up", ["", "lines", "lines/day1"])
+def test_look_takes_unit_and_frequency_from_the_survey_around(stick: Path, tmp_path: Path, up: str) -> None:
+    """survey.toml beside the file, one and two folders up; three up is another house."""
+    site = tmp_path / "site"
+    (site / up / "deep" / "er").mkdir(parents=True)
+    (site / up / "L1.sgy").write_bytes((stick / "L1.sgy").read_bytes())
+    (site / "lines.csv").write_text("grid,line,file\nunfinished\n")
+    (site / "survey.toml").write_text(
+        '[survey]\ntitle = "T"\ncode = "T"\n[[radar]]\ncentre_frequency_mhz = 400\nantenna_separation_m = 0.16\n'
+        'interval_unit = "ps"\n[[grid]]\nname = "A"\n'
+    )
+    done = run("look", site / up / "L1.sgy", "--picture", tmp_path / "a.png")
+    assert done.exit_code == 0, done.stderr
+    assert "unit stated by survey.toml: ps" in done.stdout
+    assert "radar 400" in done.stdout
+    assert "guessed" not in done.stderr
+    if up == "lines/day1":
+        (site / up / "deep" / "L1.sgy").write_bytes((stick / "L1.sgy").read_bytes())
+        done = run("look", site / up / "deep" / "L1.sgy", "--picture", tmp_path / "a.png")
+        assert "unit guessed: ps" in done.stdout
+
+
+def test_look_uses_the_radar_the_register_names(site: Path, tmp_path: Path) -> None:
+    """Of two radars the row's own counts; a file no row names is not given either."""
+    text = (site / "survey.toml").read_text().replace("[[radar]]", '[[radar]]\nname = "deep"', 1)
+    other = (
+        '[[radar]]\nname = "fine"\ncentre_frequency_mhz = 500\nantenna_separation_m = 0.1\nsample_interval_ns = 0.2\n'
+    )
+    text = text.replace('name = "A"', 'name = "A"\nradar = "fine"', 1).replace("[[grid]]", other + "\n[[grid]]", 1)
+    (site / "survey.toml").write_text(text)
+    done = run("look", site / "lines" / "L2.sgy", "--picture", tmp_path / "a.png")
+    assert "0.2 ns (stated by survey.toml)" in done.stdout, done.stderr
+    assert "radar fine" in done.stdout
+    write_lines(site / "lines", 4)
+    done = run("look", site / "lines" / "L4.sgy", "--picture", tmp_path / "a.png")
+    assert "does not say which of its radars" in done.stderr
+    assert "unit guessed: ps" in done.stdout
+
+
+def test_look_goes_on_without_a_survey_that_cannot_be_read(site: Path, tmp_path: Path) -> None:
+    """A survey.toml with a mistake, or a link that leaves the folder, is named and not used."""
+    (site / "survey.toml").write_text("[survey\n")
+    done = run("look", site / "lines" / "L1.sgy", "--picture", tmp_path / "a.png")
+    assert done.exit_code == 0
+    assert "cannot be used" in done.stderr
+    assert "unit guessed: ps" in done.stdout
+    (site / "survey.toml").rename(tmp_path / "elsewhere.toml")
+    (site / "survey.toml").symlink_to(tmp_path / "elsewhere.toml")
+    done = run("look", site / "lines" / "L1.sgy", "--picture", tmp_path / "a.png")
+    assert "leaves the survey folder" in done.stderr
+
+
+@pytest.mark.parametrize(
+    ("given", "says"),
+    [(["--unit", "ps"], "unit stated by --unit: ps"), (["--interval-ns", "0.25"], "stated by --interval-ns")],
+)
+def test_look_names_who_stated_the_interval(stick: Path, tmp_path: Path, given: list[str], says: str) -> None:
+    """A person's option is not the survey."""
+    done = run("look", stick / "L1.sgy", "--picture", tmp_path / "a.png", *given)
+    assert says in done.stdout
+    assert "survey" not in done.stdout
 
 
 @pytest.mark.parametrize("given", [["--unit", "ps"], ["--interval-ns", "0.25"]])

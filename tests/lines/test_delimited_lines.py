@@ -41,7 +41,7 @@ def test_rows_may_be_samples_and_the_interval_declared(tmp_path):
     got = read_line(tmp_path / "a.csv")
     np.testing.assert_array_equal(got.data, DATA)
     assert (got.interval_ns, got.interval_origin) == (0.25, "comment in the file")
-    assert read_line(tmp_path / "a.csv", OPTIONS).interval_origin == "survey"
+    assert read_line(tmp_path / "a.csv", OPTIONS).interval_origin == "given"
 
 
 def test_a_separator_at_the_end_of_rows_is_no_value(tmp_path):

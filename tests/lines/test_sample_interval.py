@@ -30,8 +30,8 @@ def exact(tmp_path):
 
 def test_the_surveys_interval_beats_everything(exact):
     got = read_line(exact, ReadOptions(interval_ns=0.25, interval_unit="ns"))
-    assert (got.interval_ns, got.interval_origin) == (0.25, "survey")
-    assert "the survey says 0.25 ns per sample, the file's field 195 would be 0.195 ns (ps)" in str(got.problems[0])
+    assert (got.interval_ns, got.interval_origin) == (0.25, "given")
+    assert "0.25 ns per sample is given, the file's field 195 would be 0.195 ns (ps)" in str(got.problems[0])
 
 
 def test_a_survey_interval_that_the_field_rounds_is_no_disagreement(exact):
@@ -41,7 +41,7 @@ def test_a_survey_interval_that_the_field_rounds_is_no_disagreement(exact):
 def test_the_surveys_unit_beats_the_revision_2_field(exact):
     got = read_line(exact, ReadOptions(interval_unit="ps"))
     assert got.interval_ns == pytest.approx(0.195, rel=1e-15)
-    assert got.interval_origin == "file, unit stated by the survey: ps"
+    assert got.interval_origin == "file, unit given: ps"
     assert got.problems == ()
 
 

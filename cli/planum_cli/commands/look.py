@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from contextlib import suppress
 from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -10,11 +11,12 @@ import click
 
 from planum.errors import LineError, Problem
 from planum_cli import options
+from planum_cli.nearby import survey_of
 from planum_cli.running import quoted
 from planum_cli.talk import Talk, aligned
 
 if TYPE_CHECKING:
-    from planum.lines.recording import Recording
+    from planum.lines.recording import IntervalUnit, ReadOptions, Recording
 
 
 @click.command(
@@ -22,7 +24,7 @@ if TYPE_CHECKING:
     cls=options.PlainCommand,
     examples=(
         "planum look lines/A_01.sgy              what the file says, and A_01-look.png in this folder",
-        "planum look lines/A_01.sgy --unit ps --frequency 400",
+        "planum look lines/A_01.sgy --unit ps --frequency-mhz 400",
     ),
 )
 @click.argument("file", type=click.Path(exists=True, dir_okay=False, path_type=Path))
@@ -40,33 +42,78 @@ if TYPE_CHECKING:
 )
 @click.option("--unit", type=click.Choice(["ps", "ns", "us"]), help="What the file's interval field holds.")
 @click.option(
-    "--frequency", metavar="MHZ", type=click.FloatRange(10, 3000), help="Nominal centre frequency, to compare with."
+    "--frequency-mhz",
+    metavar="MHZ",
+    type=click.FloatRange(10, 3000),
+    help="Nominal centre frequency, to compare with.",
 )
 @options.manner
 @click.pass_obj
 def command(talk: Talk, file: Path, picture: Path | None, interval_ns: float | None, **rest: Any) -> int:
-    """Draw the recorded line FILE as it is, and print what it says of itself."""
-    from planum.lines.reading import read_line
+    """Draw the recorded line FILE as it is, and print what it says of itself.
+
+    What the file leaves open is taken from the survey.toml of its folder, or one or two folders up. Without one the
+    likely unit of the interval field is used, and called guessed.
+    """
     from planum.lines.recording import ReadOptions
     from planum.outputs.look import draw_look
 
-    if interval_ns is not None and rest["unit"] is not None:
+    unit = rest["unit"]
+    if interval_ns is not None and unit is not None:
         raise click.UsageError("--interval-ns and --unit both say how long a sample is; give one of them")
     target = Path(f"{file.stem}-look.png") if picture is None else picture
     _refuse_overwriting(target, file)
-    frequency = None if rest["frequency"] is None else rest["frequency"] / 1e3
-    try:
-        recording = read_line(
-            file, ReadOptions(interval_ns=interval_ns, interval_unit=rest["unit"], centre_frequency_ghz=frequency)
-        )
-    except LineError as error:
-        raise LineError([_said_here(p) for p in error.problems]) from error
+    stated, where, kept = survey_of(file)
+    for problem in kept:
+        talk.tell(problem)
+    wanted = stated or ReadOptions()
+    who = "survey.toml"
+    if interval_ns is not None or unit is not None:
+        wanted = replace(wanted, interval_ns=interval_ns, interval_unit=unit)
+        who = "--interval-ns" if unit is None else "--unit"
+    if rest["frequency_mhz"] is not None:
+        wanted = replace(wanted, centre_frequency_ghz=rest["frequency_mhz"] / 1e3)
+    recording = _read(talk, file, wanted, who)
     for problem in recording.problems:
         talk.tell(problem)
-    draw_look(target, recording, title=file.name, centre_frequency_ghz=frequency)
-    talk.result(aligned([*_facts(recording), ("picture", target)]))
+    draw_look(target, recording, title=file.name, centre_frequency_ghz=wanted.centre_frequency_ghz)
+    facts = _facts(recording) + ([("settings", where)] if where else [])
+    talk.result(aligned([*facts, ("picture", target)]))
     talk.next("planum new MYSITE --lines FOLDER   drafts a survey from a folder of such files")
     return 0
+
+
+def _read(talk: Talk, file: Path, wanted: ReadOptions, who: str) -> Recording:
+    """Read the line; where nobody says the unit of the interval field, in the first that gives a believable window."""
+    from planum.lines.reading import read_line
+
+    try:
+        recording = read_line(file, wanted)
+    except LineError as error:
+        unknown = any(p.key == "interval_unit" for p in error.problems)
+        guessed = _guessed(file, wanted) if unknown and wanted.interval_unit is None else {}
+        if not guessed:
+            raise LineError([_said_here(p) for p in error.problems]) from error
+        unit, *others = guessed
+        rest = f"; {' or '.join(others)} would also give a believable window" if others else ""
+        talk.say(f"unit guessed: {unit}{rest}; give --unit if you know it")
+        return replace(guessed[unit], interval_origin=f"unit guessed: {unit}")
+    origin = recording.interval_origin
+    if origin == "given":
+        return replace(recording, interval_origin=f"stated by {who}")
+    return replace(recording, interval_origin=origin.replace("unit given:", f"unit stated by {who}:"))
+
+
+def _guessed(file: Path, wanted: ReadOptions) -> dict[str, Recording]:
+    """Return the recording under every unit that gives a believable window, the commonest unit first."""
+    from planum.lines.reading import read_line
+
+    found: dict[str, Recording] = {}
+    units: tuple[IntervalUnit, ...] = ("ps", "ns", "us")
+    for unit in units:
+        with suppress(LineError):
+            found[unit] = read_line(file, replace(wanted, interval_unit=unit))
+    return found
 
 
 _TOLD = ("n_samples", "n_traces_found")

@@ -27,6 +27,8 @@ def resolve_interval(
 ) -> tuple[float, str, tuple[Problem, ...]]:
     """Return the interval in ns, its origin for people, and warnings.
 
+    Who gave an interval or a unit, a survey or a person, only the caller knows: the origin says "given".
+
     The survey's interval comes first, then the survey's unit for the file's field, then a revision 2 field
     ``exact_us`` (µs). Nothing is inferred: without any of the three the error names the likely unit.
 
@@ -37,7 +39,7 @@ def resolve_interval(
     """
     if options.interval_ns is not None:
         warnings = tuple(_disagreement(options.interval_ns, field, n_samples, file, byte))
-        return float(options.interval_ns), "survey", warnings
+        return float(options.interval_ns), "given", warnings
     unit = options.interval_unit
     if unit is not None:
         return _by_unit(unit, field, exact_us, file, byte)
@@ -96,7 +98,7 @@ def _by_unit(
                 severity="warning",
             ),
         )
-    return interval, f"file, unit stated by the survey: {unit}", warnings
+    return interval, f"file, unit given: {unit}", warnings
 
 
 def _disagreement(interval_ns: float, field: float, n_samples: int, file: str, byte: int | None) -> Iterator[Problem]:
@@ -105,7 +107,7 @@ def _disagreement(interval_ns: float, field: float, n_samples: int, file: str, b
     if likely and not any(abs(interval_ns / NS_PER[u] - field) <= max(0.51, 0.01 * field) for u in NS_PER):
         as_read = " or ".join(f"{field * NS_PER[u]:g} ns ({u})" for u in likely)
         yield Problem(
-            came=f"the survey says {interval_ns:g} ns per sample, the file's field {field:g} would be {as_read}",
+            came=f"{interval_ns:g} ns per sample is given, the file's field {field:g} would be {as_read}",
             do="check sample_interval_ns",
             file=file,
             key="sample_interval_ns",
