@@ -9,6 +9,7 @@ import numpy as np
 import pytest
 import xarray as xr
 
+from planum import plugins
 from planum.errors import LineError, PlanumWarning
 from planum.lines import reading
 from planum.lines.reading import LineReader, line_readers, open_line, parts_in, read_line
@@ -60,7 +61,7 @@ def installed(monkeypatch):
 
     def install(**readers):
         entries = [*real, *(Entry(n, r) for n, r in readers.items())]
-        monkeypatch.setattr(reading.metadata, "entry_points", lambda group: entries)
+        monkeypatch.setattr(plugins.metadata, "entry_points", lambda group: entries)
         line_readers.cache_clear()
 
     yield install
@@ -84,7 +85,7 @@ def test_a_third_partys_reader_is_found_by_suffix_and_by_content(tmp_path, insta
 
 def test_a_broken_plug_in_warns_and_the_rest_goes_on(tmp_path, installed):
     installed(ours=OURS, useless=NO_READER)
-    with pytest.warns(PlanumWarning, match=r"'useless' \(some.package:useless\) cannot be loaded: it has no name"):
+    with pytest.warns(PlanumWarning, match=r"'useless' \(some.package:useless\) cannot be loaded: it is no line reader"):
         readers = line_readers()
     assert "useless" not in readers
     assert {"ours", "segy"} <= set(readers)
@@ -95,7 +96,7 @@ def test_a_plug_in_that_cannot_be_imported_warns(installed, monkeypatch):
         *metadata.entry_points(group=reading.GROUP),
         metadata.EntryPoint("gone", "no_such_module_anywhere:READER", reading.GROUP),
     ]
-    monkeypatch.setattr(reading.metadata, "entry_points", lambda group: entries)
+    monkeypatch.setattr(plugins.metadata, "entry_points", lambda group: entries)
     line_readers.cache_clear()
     with pytest.warns(PlanumWarning, match="'gone' .*No module named 'no_such_module_anywhere'"):
         assert "segy" in line_readers()

@@ -2,13 +2,11 @@
 
 from __future__ import annotations
 
-import warnings
 from collections.abc import Sequence
 from functools import cache
-from importlib.metadata import entry_points
-from typing import cast
 
-from planum.errors import PlanumWarning, Problem, RecipeError, nearest
+from planum import plugins
+from planum.errors import Problem, RecipeError, nearest
 from planum.records import Step
 
 __all__ = ["check_order", "find_steps", "get_step"]
@@ -19,22 +17,7 @@ GROUP = "planum.steps"
 @cache
 def find_steps() -> dict[str, Step]:
     """Return the installed steps by name."""
-    found: dict[str, Step] = {}
-    for entry in entry_points(group=GROUP):
-        try:
-            step = entry.load()
-            for attribute in ("name", "version", "reach", "takes", "gives", "Params"):
-                getattr(step, attribute)
-        except Exception as fault:  # a plug-in may fail in any way
-            problem = Problem(
-                came=f"the step {entry.name!r} from {entry.value!r} cannot be loaded ({fault})",
-                do="mend or remove that package; the other steps work",
-                severity="warning",
-            )
-            warnings.warn(PlanumWarning(problem), stacklevel=2)
-            continue
-        found[entry.name] = cast(Step, step)
-    return found
+    return plugins.load(GROUP, Step, "step")  # type: ignore[type-abstract]
 
 
 def get_step(name: str) -> Step:

@@ -6,13 +6,13 @@ import functools
 import math
 import warnings
 from dataclasses import replace
-from importlib import metadata
 from pathlib import Path
 from typing import Any, Protocol, runtime_checkable
 
 import numpy as np
 import xarray as xr
 
+from planum import plugins
 from planum.errors import LineError, PlanumWarning, Problem, nearest, printable
 from planum.lines.interval import check_interval
 from planum.lines.recording import ReadOptions, Recording
@@ -48,26 +48,7 @@ def line_readers() -> dict[str, LineReader]:
 
     The result is kept for the life of the process.
     """
-    found: dict[str, LineReader] = {}
-    for entry in sorted(metadata.entry_points(group=GROUP), key=lambda e: (e.name, e.value)):
-        try:
-            reader = entry.load()
-            if not isinstance(reader, LineReader):
-                raise TypeError("it has no name, suffixes, claims and read")
-        except Exception as error:  # a plug-in may fail in any way, the others go on
-            warnings.warn(
-                PlanumWarning(
-                    Problem(
-                        came=f"the line reader {entry.name!r} ({entry.value}) cannot be loaded: {error}",
-                        do="repair or remove that package",
-                        severity="warning",
-                    )
-                ),
-                stacklevel=2,
-            )
-            continue
-        found[entry.name] = reader
-    return found
+    return plugins.load(GROUP, LineReader, "line reader")  # type: ignore[type-abstract]
 
 
 def read_line(path: Path, options: ReadOptions = ReadOptions()) -> Recording:  # noqa: B008  (frozen)
