@@ -24,7 +24,7 @@ from planum.pipeline.estimate import (
 )
 from planum.pipeline.frames import frame_warnings, from_headers, site_frames
 from planum.pipeline.passes import read_pieces
-from planum.pipeline.recipe import resolve_chain, settings
+from planum.pipeline.recipe import chain_notes, limit_ns, resolve_chain, settings
 from planum.pipeline.sets import Draft, draft_sets
 from planum.pipeline.store import Store
 from planum.records import Plan, SetPlan, Velocity, key, migration_velocity
@@ -74,7 +74,7 @@ def resolve(
     velocity, curve = _velocity(survey, drafts, chosen, store, executor, warnings, progress)
     first = drafts[0]
     windows = _intervals(survey, drafts, velocity, warnings)
-    sets = tuple(_finish(d, chosen, velocity, windows) for d in drafts)
+    sets = tuple(_finish(d, chosen, velocity, windows, told=warnings) for d in drafts)
     warnings += _other_velocity(sets)
     cell = min(_cell(survey, d) for d in drafts)
     plan = Plan(
@@ -99,11 +99,14 @@ def _finish(
     windows_m: Sequence[tuple[float, float]],
     *,
     until: str | None = None,
+    told: list[Problem] | None = None,
 ) -> SetPlan:
+    """Settle a set's chain and windows; what its steps have to say is added to ``told``."""
     facts = set_facts(draft.entries, draft.facts, draft.geometry, draft.radar, velocity, pool=draft.pool)
     chain = resolve_chain(chosen, facts, until=until)
-    gain = next((s.params for s in chain if s.name == "gain"), {})
-    stop = gain.get("stop_ns")
+    if told is not None:
+        told += [p for p in chain_notes(chosen, facts) if p not in told]
+    limit = limit_ns(chosen, facts)
     separation = draft.radar.antenna_separation_m
     edges = [velocity.time(np.array(w), separation_m=separation) for w in windows_m]
     return SetPlan(
@@ -121,7 +124,7 @@ def _finish(
         windows_ns=tuple((float(a), float(b)) for a, b in edges),
         entries=draft.entries,
         frame=draft.frame,
-        limit_depth_m=None if stop is None else float(velocity.depth(stop, separation_m=separation)),
+        limit_depth_m=None if limit is None else float(velocity.depth(limit, separation_m=separation)),
     )
 
 
