@@ -152,8 +152,7 @@ def _stopped(talk: Talk, stop: BaseException) -> int:
 def _failed(talk: Talk, error: Exception) -> int:
     if talk.debug:
         traceback.print_exception(error)
-    for problem in codes.problems_of(error):
-        talk.tell(problem)
+    talk.tell_all(codes.problems_of(error))
     return codes.code_of(error)
 
 

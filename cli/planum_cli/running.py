@@ -2,12 +2,16 @@
 
 from __future__ import annotations
 
+import re
 import shlex
+from collections.abc import Sequence
+from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
+from planum.errors import Problem
 from planum_cli import codes
-from planum_cli.talk import Talk, aligned
+from planum_cli.talk import Talk, aligned, several
 
 if TYPE_CHECKING:
     from planum.pipeline.run import RunResult
@@ -16,6 +20,9 @@ __all__ = ["count", "quoted", "tell_run"]
 
 LABELS = {"limit_depth_m": ("ground meets noise at", "m"), "notes": ("mind", "")}
 """Words and units for entries of a run's summary whose name alone would not tell."""
+
+MOST_ROWS = 6
+"""Reasons for setting lines aside that the summary names; the report names all."""
 
 
 def count(number: int, word: str) -> str:
@@ -33,14 +40,13 @@ def tell_run(talk: Talk, result: RunResult, *, site: Path, name: str | None = No
 
     ``at_home``: the run lies in the survey folder, where `planum view SITE` looks for it.
     """
-    for problem in (*result.warnings, *result.set_aside):
-        talk.tell(problem)
     aside = len(result.set_aside)
-    if aside:
-        talk.say(f"{count(aside, 'line')} set aside; the report names each and why")
     if not result.changed:
         talk.say("nothing has changed since this run was made: it stays as it is")
-    talk.result(aligned([("results", result.out), *_pairs(result.summary)]))
+    talk.tell_all(result.warnings, last=map(_said_aside, result.set_aside))
+    if aside:
+        talk.say(f"{count(aside, 'line')} set aside; the report names each and why")
+    talk.result(aligned([("results", result.out), *_pairs(result.summary), *_aside_rows(result.set_aside)]))
     out = result.out
     view = f"planum view {quoted(site if at_home else out)}" + (f" --name {name}" if name else "")
     talk.next(
@@ -49,6 +55,30 @@ def tell_run(talk: Talk, result: RunResult, *, site: Path, name: str | None = No
         f"{view}   to look at them in three dimensions",
     )
     return codes.SET_ASIDE if aside else codes.DONE
+
+
+def _said_aside(problem: Problem) -> Problem:
+    """Return a problem that cost a line with the words that say so; the run went on, so it is a warning."""
+    came = problem.came if "set aside" in problem.came else f"set aside: {problem.came}"
+    return replace(problem, came=came, severity="warning")
+
+
+def _aside_rows(problems: Sequence[Problem]) -> list[tuple[str, str]]:
+    """Return how many lines were set aside, and which for which reason."""
+    rows: dict[str, list[str]] = {}
+    for problem in problems:
+        named = re.fullmatch(r"line (\S+) is set aside(?:: (.*))?", problem.came)
+        line, reason = (named[1], named[2] or "") if named else (problem.line, problem.came)
+        rows.setdefault(reason, []).append(line or problem.file or "?")
+    texts = []
+    for reason, lines in rows.items():
+        word = "line" if len(set(lines)) == 1 else "lines"
+        texts.append(f"{word} {several(lines)}" + (f" ({reason})" if reason else ""))
+    texts = texts if len(texts) <= MOST_ROWS else [*texts[:MOST_ROWS], f"{len(texts) - MOST_ROWS} more reasons: report"]
+    return [
+        ("set aside", f"{len(problems)}: {text}") if not i else ("", f"{'':{len(str(len(problems))) + 2}}{text}")
+        for i, text in enumerate(texts)
+    ]
 
 
 def _pairs(summary: dict[str, Any]) -> list[tuple[str, str]]:

@@ -6,6 +6,7 @@
      ├ result   what was asked for: stdout
      ├ say      where we are: stderr, silent with --quiet
      ├ tell     a problem as one line: stderr, always
+     ├ tell_all problems as few lines: those that differ only in their file and line are one sentence
      ├ next     the next useful command: stderr, silent with --quiet
      └ progress a live bar on a terminal, a line at every quarter elsewhere
 """
@@ -18,18 +19,21 @@ import time
 import warnings
 from collections.abc import Iterable, Iterator
 from contextlib import contextmanager, suppress
+from dataclasses import replace
 from typing import Any
 
 import click
 
 from planum.errors import PlanumWarning, Problem, printable
 
-__all__ = ["Talk", "aligned"]
+__all__ = ["Talk", "aligned", "folded", "several"]
 
 BAR = 24
 """Characters of the live bar."""
 REDRAW_S = 0.1
 """A live bar is redrawn at most ten times a second."""
+FEW = 3
+"""Of many names that do not count on, so many are written out."""
 LINE_S = 2.0
 """Lines of one stage come at most every two seconds, but for its first and its last."""
 
@@ -39,6 +43,43 @@ def aligned(pairs: Iterable[tuple[str, object]], *, indent: int = 0) -> str:
     rows = [(str(label), printable(value, longest=2000)) for label, value in pairs]
     wide = max((len(label) for label, _ in rows), default=0)
     return "\n".join(f"{' ' * indent}{label:<{wide}}  {value}".rstrip() for label, value in rows)
+
+
+def folded(problems: Iterable[Problem]) -> list[list[Problem]]:
+    """Return problems in groups that differ only in file, line and byte, in the order of their first."""
+    groups: dict[Problem, list[Problem]] = {}
+    for problem in problems:
+        groups.setdefault(replace(problem, file="", line="", byte=None), []).append(problem)
+    return list(groups.values())
+
+
+def several(names: Iterable[str]) -> str:
+    """Return names as "1 to 25" where they count on, else the first three and how many more there are."""
+    names = list(dict.fromkeys(names))
+    if len(names) > 2 and all(n.isascii() and n.isdigit() and len(n) < 10 for n in names):
+        numbers = sorted(map(int, names))
+        if numbers == list(range(numbers[0], numbers[-1] + 1)):
+            return f"{numbers[0]} to {numbers[-1]}"
+    if len(names) <= FEW + 1:  # "and 1 more" is as long as the name
+        return ", ".join(names)
+    return f"{', '.join(names[:FEW])} and {len(names) - FEW} more"
+
+
+def _as_one(same: list[Problem]) -> Problem:
+    """Return several problems that differ only in their places as one that counts them."""
+    same = list({(p.file, p.line): p for p in reversed(same)}.values())[::-1]
+    if len(same) == 1:
+        return same[0]
+    files, lines = list(dict.fromkeys(p.file for p in same)), list(dict.fromkeys(p.line for p in same))
+    if lines == [""]:
+        where = f"{len(files)} files ({several(files)})"
+    elif len(files) == 1:
+        where = f"{f'{files[0]}, ' if files[0] else ''}{len(lines)} lines ({several(n or 'none' for n in lines)})"
+    else:
+        where = f"{len(lines)} lines ({several(n or '?' for n in lines)}; {several(f for f in files if f)})"
+    first = same[0]
+    key = f", {first.key}" if first.key else ""
+    return replace(first, came=f"{where}{key}: {first.came}", file="", line="", key="", byte=None)
 
 
 class Progress:
@@ -137,6 +178,16 @@ class Talk:
             self._said.add(line)
             self._clear()
             _to_stderr(line)
+
+    def tell_all(self, problems: Iterable[Problem], *, last: Iterable[Problem] = ()) -> None:
+        """Write problems, those of many lines in one sentence each; what concerns few, errors and ``last`` at the end.
+
+        The summary that follows then stands right below what a person must act on.
+        """
+        groups = folded(problems)
+        groups.sort(key=lambda same: (same[0].severity == "error", len(same) == 1))
+        for same in (*groups, *folded(last)):
+            self.tell(_as_one(same))
 
     @contextmanager
     def progress(self) -> Iterator[Progress]:

@@ -4,9 +4,11 @@ from __future__ import annotations
 
 import errno
 import os
+import re
 import subprocess
 import sys
 import warnings
+from dataclasses import replace
 from pathlib import Path
 
 import click
@@ -28,7 +30,7 @@ from planum.errors import (
 from planum.pipeline.run import RunResult
 from planum_cli.commands import tidy as tidy_command
 from planum_cli.main import COMMANDS, HEADINGS, cli
-from planum_cli.talk import Progress, aligned
+from planum_cli.talk import Progress, aligned, several
 
 MAP = "planum.pipeline.run.map_site"
 
@@ -221,10 +223,63 @@ def test_a_run_says_where_it_is_and_what_is_next(monkeypatch, tmp_path, aside, c
     monkeypatch.setattr(MAP, lambda *_, **__: result)
     done = run("map", str(tmp_path))
     assert done.exit_code == code
-    assert done.stdout.splitlines() == [f"results  {tmp_path / 'out'}", "lines    3"]
+    rows = [["results", str(tmp_path / "out")], ["lines", "3"]] + [["set aside", "1: line 7"]] * bool(aside)
+    assert [re.split(r"  +", line) for line in done.stdout.splitlines()] == rows
     assert "report.html" in done.stderr
     assert f"planum view {tmp_path}" in done.stderr
     assert ("1 line set aside" in done.stderr) == bool(aside)
+
+
+def test_many_alike_problems_are_one_sentence_and_single_lines_come_last(monkeypatch, tmp_path) -> None:
+    """25 lines with one complaint: a range and three files; then single ones; set-aside lines above the table."""
+    alike = [
+        Problem("20% clipped", do="lower bounds", file=f"A_{i}.sgy", line=str(i), severity="warning")
+        for i in range(1, 26)
+    ]
+    single = Problem("4 dead traces", file="A_3.sgy", line="3", severity="warning")
+    aside = [Problem("no samples", file=f"A_{i}.sgy", line=str(i)) for i in (30, 40)] + [
+        Problem("line A/50 is set aside: A_50.sgy is not there", file="lines.csv", line="9", severity="warning")
+    ]
+    result = RunResult(tmp_path / "out", tuple(aside), (single, *alike), changed=True, summary={"lines": 3})
+    monkeypatch.setattr(MAP, lambda *_, **__: result)
+    done = run("map", str(tmp_path))
+    assert done.stderr.splitlines()[:5] == [
+        "warning: 25 lines (1 to 25; A_1.sgy, A_2.sgy, A_3.sgy and 22 more): 20% clipped; lower bounds",
+        "warning: A_3.sgy, line 3: 4 dead traces",
+        "warning: 2 lines (30, 40; A_30.sgy, A_40.sgy): set aside: no samples",
+        "warning: lines.csv, line 9: line A/50 is set aside: A_50.sgy is not there",
+        "3 lines set aside; the report names each and why",
+    ]
+    assert done.stdout.splitlines()[2:] == [
+        "set aside  3: lines 30, 40 (no samples)",
+        "              line A/50 (A_50.sgy is not there)",
+    ]
+
+
+@pytest.mark.parametrize(
+    ("names", "text"),
+    [
+        (["3", "1", "2"], "1 to 3"),
+        (["1", "2"], "1, 2"),
+        (["1", "2", "4"], "1, 2, 4"),
+        (["a", "b", "c", "d"], "a, b, c, d"),
+        (["1", "3", "5", "7", "9"], "1, 3, 5 and 2 more"),
+    ],
+)
+def test_names_are_a_range_or_the_first_three(names: list[str], text: str) -> None:
+    """A range only where no number is missing from it."""
+    assert several(names) == text
+
+
+def test_mistakes_that_differ_in_more_than_their_place_stay_apart(raising) -> None:
+    """Same words about two keys, or with another cure, are two sentences; a text file's lines are counted in it."""
+    rows = [Problem("no number", file="lines.csv", line=str(i), key="start_x_m") for i in (2, 3, 4)]
+    done = raising(SurveyError([*rows, replace(rows[0], key="end_x_m"), replace(rows[0], do="mend it")]))
+    assert done.stderr.splitlines() == [
+        "error: lines.csv, 3 lines (2 to 4), start_x_m: no number",
+        "error: lines.csv, line 2, end_x_m: no number",
+        "error: lines.csv, line 2, start_x_m: no number; mend it",
+    ]
 
 
 def test_the_librarys_warnings_are_sentences_and_come_once(monkeypatch, tmp_path) -> None:

@@ -119,7 +119,7 @@ def test_headers_that_disagree_are_reported(line):
             ReadOptions(interval_unit="us"),
             "the window is 4e[+]07 ns: 200 samples of 200000 ns .*likely unit of 200: ps",
         ),
-        (ReadOptions(interval_ns=200.0), "the window is 40000 ns.*survey.*likely unit of 200: ps"),
+        (ReadOptions(interval_ns=200.0), "the window is 40000 ns.*given.*likely unit of 200: ps"),
         (ReadOptions(interval_ns=0.0002), "the window is 0.04 ns.*likely unit of 0.0002: us"),
         (ReadOptions(interval_ns=0.0249), "the window is 4.98 ns"),
         (ReadOptions(interval_ns=25.1), "the window is 5020 ns"),

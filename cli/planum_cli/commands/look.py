@@ -74,8 +74,7 @@ def command(talk: Talk, file: Path, picture: Path | None, interval_ns: float | N
     if rest["frequency_mhz"] is not None:
         wanted = replace(wanted, centre_frequency_ghz=rest["frequency_mhz"] / 1e3)
     recording = _read(talk, file, wanted, who)
-    for problem in recording.problems:
-        talk.tell(problem)
+    talk.tell_all(recording.problems)
     draw_look(target, recording, title=file.name, centre_frequency_ghz=wanted.centre_frequency_ghz)
     facts = _facts(recording) + ([("settings", where)] if where else [])
     talk.result(aligned([*facts, ("picture", target)]))

@@ -130,8 +130,7 @@ def _ask(talk: Talk, found: Found, answers: Answers, folder: Path) -> Answers:
 
 
 def _tell(talk: Talk, made: Draft, folder: Path) -> None:
-    for note in made.notes:
-        talk.tell(note)
+    talk.tell_all(made.notes)
     if made.guessed:
         talk.say("guessed, so check it:\n" + "\n".join(f"  {line}" for line in made.guessed))
     copied = f"{count(len(made.files), 'line file')} copied to {quoted(folder / 'lines')}; " if made.copies else ""
