@@ -29,10 +29,11 @@ LINES_TO_TELL = 15
 """With fewer lines a wall along them, and its flanks on the lines beside, is too large a share for a median to ignore:
 3 of 15 are a fifth."""
 
-_LATE = 0.25
-_FLAT, _FLAT_DB = 0.5, 1.0
-"""The last quarter of a record is flat when its level moves by less than half of what decay and spreading would make of
-it, or by less than 1 dB: then it is noise. Still falling, it is ground, and the noise was not recorded."""
+_EARLY, _LATE = 0.5, 0.25
+_FLAT, _FLAT_DB = 0.2, 1.0
+"""The last quarter of a record is flat when its level falls by less than a fifth of what spreading and the decay of the
+first half would make of it, or by less than 1 dB: then it is noise. Still falling, it is ground in noise or ground
+alone, and the noise was not recorded. Level and fall of ground at the noise's level: 3 dB above it, half the fall."""
 
 _ONE_BLOCK = 30
 _BOUNDS = (0.25, 2.5)
@@ -84,15 +85,14 @@ def noise_is_seen(
 ) -> bool:
     """Tell whether the end of the record is noise: its level has stopped falling.
 
-    The decay is fitted on the first three quarters after ``start_ns``, spreading removed, and continued over the last
-    quarter; noise is there when the last quarter moves by less than half of that. False when there is too little of
-    either to tell.
+    The decay is fitted on the first half after ``start_ns``, spreading removed, and continued over the last quarter;
+    noise is there when the last quarter moves by less than a fifth of that. False when there is too little of either
+    to tell.
     """
     time = np.asarray(time_ns, float)
     border = time[-1] - _LATE * (time[-1] - start_ns)
-    fitted = absorption(
-        envelope, 0.0, time, power=power, span_ns=(start_ns, float(border)), period_ns=period_ns, most=np.inf
-    )
+    early = (start_ns, float(start_ns + _EARLY * (time[-1] - start_ns)))
+    fitted = absorption(envelope, 0.0, time, power=power, span_ns=early, period_ns=period_ns, most=np.inf)
     smooth = _median(np.asarray(envelope, float), max(round(period_ns / (time[1] - time[0])) | 1, 3))
     late = (time > border) & (smooth > 0)
     if fitted is None or late.sum() < 5:
