@@ -2,8 +2,11 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
+import pyvista as pv
 import xarray as xr
 from scipy.ndimage import gaussian_filter
 
@@ -102,6 +105,39 @@ def test_texts_state_interval_error_level_and_caution(ring: xr.Dataset) -> None:
     assert scene.at_level(12345.6).level_text() == "nothing 1.5 m across reaches amplitude 12 346"
     assert "nothing 1.5 m across reaches" in scene.at_level(9.0).level_text()
     assert build_scene(ring.isel(depth=[3])).level_text() == "one slice: no isosurface"
+
+
+def test_a_level_below_everything_is_told_from_one_above_everything(ring: xr.Dataset) -> None:
+    """The smoothed slices hold 0.1 to about 1.2: below them all is inside, above them nothing."""
+    scene = build_scene(ring)
+    low, high = float(np.nanmin(scene.soft.amplitude)), float(np.nanmax(scene.soft.amplitude))
+    assert scene.at_level(low - 0.01).isosurface.n_cells == scene.at_level(high + 0.01).isosurface.n_cells == 0
+    assert scene.at_level(low - 0.01).level_text().startswith("everything lies above amplitude")
+    assert "across reaches amplitude" in scene.at_level(high + 0.01).level_text()
+    assert replace(scene, isosurface=pv.PolyData(), hidden=True).level_text() == "isosurface off"
+
+
+def test_an_unplaced_grid_has_no_east_and_no_north(ring: xr.Dataset) -> None:
+    """As in the slice pictures: x, y and a y arrow without a reference system; east, north and N with one."""
+    own = {label.text for label in build_scene(ring).frame.labels}
+    assert {"x, m from 512 300", "y"} < own
+    assert not [text for text in own if text == "N" or "east" in text or "north" in text]
+    as_attribute = ring.assign_attrs(crs="EPSG:25832")
+    as_mapping = ring.assign(crs=((), np.int32(0)))
+    for placed in (as_attribute, as_mapping):
+        names = {label.text for label in build_scene(placed).frame.labels}
+        assert {"m east of 512 300", "N"} < names
+
+
+def test_the_default_slice_leaves_most_of_the_bodies_uncovered(ring: xr.Dataset) -> None:
+    """Amplitude falls downwards below 0.7 m, so that the score alone would choose a slice above most of the wall."""
+    deep = ring.depth > 0.75
+    scene = build_scene(
+        ring.assign(amplitude=xr.where(deep, 1.6 * ring.amplitude.mean() + ring.amplitude, ring.amplitude))
+    )
+    inside = np.where(np.isfinite(scene.soft.amplitude), scene.soft.amplitude, -np.inf) >= scene.level
+    volume = inside[::-1].sum(axis=(1, 2))
+    assert volume[: scene.index + 1].sum() > 0.5 * volume.sum()
 
 
 def test_lines_lie_on_the_surface_at_their_map_places(ring: xr.Dataset) -> None:

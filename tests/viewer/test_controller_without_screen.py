@@ -87,3 +87,10 @@ def test_the_slider_of_levels_runs_over_the_smoothed_slices(control: Controller,
 
 def test_a_picture_is_named_after_code_and_depth(control: Controller) -> None:
     assert control.picture_name() == "MBF1_d045-055cm"
+
+
+def test_a_picture_with_the_isosurface_off_says_so(control: Controller) -> None:
+    control.toggle_isosurface()
+    assert control.shown().level_text() == control.level_text() == "isosurface off"
+    control.toggle_isosurface()
+    assert control.shown().level_text().startswith("isosurface at amplitude")

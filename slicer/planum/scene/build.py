@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-from dataclasses import dataclass, replace
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field, replace
+from typing import Any
 
 import numpy as np
 import pyvista as pv
 import xarray as xr
+from scipy.ndimage import find_objects, label
 
 from planum.constants import CAUTIONS
 from planum.scene.frame import Frame, frame_of
@@ -25,11 +27,15 @@ and a square of 1 m is the least that is told from stones."""
 ISO_QUANTILES = (0.5, 0.99)
 """The default isosurface lies halfway between these quantiles of the smoothed cells of the slices that show most
 structure: half height is where a body's edge is usually read."""
+UNCOVERED = 0.6
+"""The default slice is moved down until this share of the bodies' volume lies above it: the slice is opaque."""
 STANDING = 0.6
 """The default slice is the foot of the best-structured one: from it downwards, the last with this share of its score.
 Bodies then stand on the slice; on the best one itself they would lie below it, hidden."""
 ISO_ORIGIN = "halfway from the median to the strongest hundredth of the best slices"
-SPACING_ATTR, SPACING_CELLS = "statement_line_spacing_m", 5.0
+STATEMENT = "statement_"
+"""How the names of those attributes begin that state what the slices are."""
+SPACING_ATTR, SPACING_CELLS = f"{STATEMENT}line_spacing_m", 5.0
 STRETCH = (0.02, 0.995)
 """Quantiles of the known cells drawn lightest and darkest, one stretch for all depths."""
 SHAPE = 0.16
@@ -44,6 +50,7 @@ class Scene:
 
     ``isosurface`` is that of ``soft``, the block smoothed along its slices, and empty when nothing reaches ``level``;
     ``plane`` is the slice number ``index`` of the block itself. ``spacing_m`` is the distance of the lines.
+    ``statement`` is what the slices say of themselves, ``hidden`` whether the isosurface is switched off.
     """
 
     title: str
@@ -60,6 +67,8 @@ class Scene:
     index: int
     stretch: tuple[float, float]
     exaggeration: float
+    statement: Mapping[str, Any] = field(default_factory=dict)
+    hidden: bool = False
 
     @property
     def depth_m(self) -> float:
@@ -91,9 +100,21 @@ class Scene:
         """Return the level of the isosurface and where it comes from."""
         if self.block.depth.size < 2:
             return "one slice: no isosurface"
+        if self.hidden:
+            return "isosurface off"
         if self.isosurface.n_cells == 0:
-            return f"nothing {_speck(self.spacing_m):.2g} m across reaches amplitude {_plain(self.level)}"
+            return self._nothing_text()
         return f"isosurface at amplitude {_plain(self.level)} ({self.level_origin})"
+
+    def _nothing_text(self) -> str:
+        """Tell a level above all there is from one below it."""
+        known = self.soft.amplitude[np.isfinite(self.soft.amplitude)]
+        across, level = f"{_speck(self.spacing_m):.2g} m across", _plain(self.level)
+        if known.size and float(known.min()) >= self.level:
+            return f"everything lies above amplitude {level}: no isosurface"
+        if known.size and float(np.median(known)) > self.level:
+            return f"everything but places under {across} lies above amplitude {level}: no isosurface"
+        return f"nothing {across} reaches amplitude {level}"
 
     def notes(self) -> tuple[str, ...]:
         """Return what must be known to read the picture: smoothing, what is left out, exaggeration, thinning."""
@@ -135,7 +156,8 @@ def build_scene(
         halfway between the median and the 0.99 quantile of what the smoothed slices with most structure hold.
     slice_depth
         Depth in m whose slice is drawn (the nearest); by default the foot of the one with most structure
-        (:func:`~planum.slices.structure.structure`): from there down, the last that keeps 0.6 of its score.
+        (:func:`~planum.slices.structure.structure`): from there down, the last that keeps 0.6 of its score; deeper
+        when less than 0.6 of the bodies' volume would lie above it.
     exaggeration
         How many times taller depths are drawn; by default 1, or the whole number that keeps a flat site readable.
 
@@ -159,7 +181,10 @@ def build_scene(
         exaggeration = _exaggeration(block)
     if not (np.isfinite(level) and np.isfinite(exaggeration) and exaggeration > 0):
         raise ValueError(f"level and exaggeration must be finite, exaggeration above 0; got {level}, {exaggeration}")
-    index = _foot(scores) if slice_depth is None else _at_depth(block, slice_depth)
+    if slice_depth is None:
+        index = max(_foot(scores), _under(soft, level, _speck(spacing)))
+    else:
+        index = _at_depth(block, slice_depth)
     low, high = (float(q) for q in np.quantile(known, STRETCH))
     return Scene(
         title=str(slices.attrs.get("title", "")),
@@ -170,12 +195,13 @@ def build_scene(
         isosurface=contour(soft, level, least_m=_speck(spacing)),
         plane=plane(block, index),
         lines=_polylines(lines, block.origin),
-        frame=frame_of(block.box, origin=block.origin, exaggeration=exaggeration),
+        frame=frame_of(block.box, origin=block.origin, exaggeration=exaggeration, placed=_placed(slices)),
         level=level,
         level_origin=origin,
         index=index,
         stretch=(low, high if high > low else low + 1.0),
         exaggeration=exaggeration,
+        statement={str(k).removeprefix(STATEMENT): v for k, v in slices.attrs.items() if str(k).startswith(STATEMENT)},
     )
 
 
@@ -213,6 +239,29 @@ def _foot(scores: Sequence[float]) -> int:
     best = int(np.argmax(scores))
     weaker = np.flatnonzero(np.array(scores[best:]) < STANDING * scores[best])
     return best + int(weaker[0]) - 1 if weaker.size else len(scores) - 1
+
+
+def _under(soft: Block, level: float, least_m: float) -> int:
+    """Return the first slice that has enough of the bodies' volume above it."""
+    inside = np.where(np.isfinite(soft.amplitude), soft.amplitude, -np.inf) >= level
+    numbers, _ = label(inside)
+    step = soft.cell_m * soft.thinned
+    for number, (layers, rows, columns) in enumerate(find_objects(numbers), 1):
+        if step * np.hypot(rows.stop - rows.start, columns.stop - columns.start) < least_m:
+            part = (layers, rows, columns)
+            inside[part] &= numbers[part] != number
+    volume = inside[::-1].sum(axis=(1, 2), dtype=float)
+    if not volume.any():
+        return 0
+    above = np.cumsum(volume) - volume / 2.0  # a slice is drawn in the middle of its layer
+    return (
+        int(np.argmax(above >= UNCOVERED * volume.sum())) if above[-1] >= UNCOVERED * volume.sum() else volume.size - 1
+    )
+
+
+def _placed(slices: xr.Dataset) -> bool:
+    """Tell whether x and y are map coordinates: named as an attribute, or as the grid mapping of a file."""
+    return bool(slices.attrs.get("crs")) or "crs" in slices.variables
 
 
 def _exaggeration(block: Block) -> float:

@@ -46,7 +46,11 @@ def round_step(length: float, *, parts: int) -> float:
 
 
 def frame_of(
-    box: tuple[float, float, float, float, float, float], *, origin: tuple[float, float], exaggeration: float
+    box: tuple[float, float, float, float, float, float],
+    *,
+    origin: tuple[float, float],
+    exaggeration: float,
+    placed: bool = True,
 ) -> Frame:
     """Return the frame of a block.
 
@@ -58,6 +62,8 @@ def frame_of(
         Map coordinates of local (0, 0), m: named in the axes' titles when not zero.
     exaggeration
         How many times taller depths will be drawn: only the thickness of the staffs depends on it.
+    placed
+        Whether x and y are east and north; otherwise they are the grid's own and are named so.
     """
     west, east, south, north, bottom, top = box
     wide = max(east - west, north - south)
@@ -81,10 +87,10 @@ def frame_of(
     low = bottom - 0.012 * wide / exaggeration
     labels += [Label((v, south - off, low), f"{v:g}", "right") for v in _ticks(west, east, step)]
     labels += [Label((west - off, v, low), f"{v:g}", "right") for v in _ticks(south, north - 0.3 * step, step)]
-    east_of, north_of = (f" of {o:,.0f}".replace(",", " ") if o else "" for o in origin)
     title = 5.0 * off
-    labels.append(Label(((west + east) / 2, south - title, low), f"m east{east_of}", "centre", strong=True))
-    labels.append(Label((west - title, (south + north) / 2, low), f"m north{north_of}", "right", strong=True))
+    across, up = _axis_titles(origin, placed=placed)
+    labels.append(Label(((west + east) / 2, south - title, low), across, "centre", strong=True))
+    labels.append(Label((west - title, (south + north) / 2, low), up, "right", strong=True))
 
     # labels nearer than this would touch
     deep = round_step(top - bottom, parts=max(1, min(5, int((top - bottom) * exaggeration / (0.035 * wide)))))
@@ -95,8 +101,16 @@ def frame_of(
     labels.append(Label((*beside, (top + 0.055 * wide / exaggeration)), "depth", "right", strong=True))
 
     arrow, tip = _north(east + 0.07 * wide, north - 0.16 * wide, 0.13 * wide)
-    labels.append(Label(tip, "N", "centre", strong=True))
+    labels.append(Label(tip, "N" if placed else "y", "centre", strong=True))
     return Frame(_edges(box), pv.merge(dark), pv.merge(light) if light else pv.PolyData(), arrow, tuple(labels))
+
+
+def _axis_titles(origin: tuple[float, float], *, placed: bool) -> tuple[str, str]:
+    names, link = (("m east", "m north"), " of ") if placed else (("x, m", "y, m"), " from ")
+    across, up = (
+        name + (f"{link}{o:,.0f}".replace(",", " ") if o else "") for name, o in zip(names, origin, strict=True)
+    )
+    return across, up
 
 
 def _bands(start: float, stop: float, step: float) -> list[tuple[float, float]]:
@@ -121,7 +135,7 @@ def _edges(box: tuple[float, float, float, float, float, float]) -> pv.PolyData:
 
 
 def _north(x: float, y: float, length: float) -> tuple[pv.PolyData, tuple[float, float, float]]:
-    """Return a flat arrow on the surface pointing to grid north, and the place of its letter."""
+    """Return a flat arrow on the surface pointing along y (north where placed), and the place of its letter."""
     half = 0.2 * length
     points = np.array([(x - half, y, 0), (x, y + 0.22 * length, 0), (x + half, y, 0), (x, y + length, 0)], float)
     faces = np.array([3, 0, 1, 3, 3, 1, 2, 3])

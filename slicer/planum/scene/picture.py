@@ -29,6 +29,8 @@ __all__ = ["SIZE", "render", "render_safely"]
 SIZE = (1600, 1100)
 _FINER = 2  # drawn twice as fine and averaged: clean edges whatever the driver's own smoothing does
 TIMEOUT_S = 600.0
+STATEMENT_CHUNK = "planum-statement"
+"""Keyword of the text chunk that holds the statement, as in every picture of a run."""
 
 
 def render(scene: Scene, path: Path, *, size: tuple[int, int] = SIZE) -> None:
@@ -104,6 +106,9 @@ def _write(image: Image.Image, path: Path, scene: Scene) -> None:
     said.add_text("Title", scene.title)
     said.add_text("Description", "; ".join([scene.slice_text(), scene.level_text(), *scene.notes()]))
     said.add_text("Warning", scene.caution)
+    if scene.statement:
+        plain = {name: value.tolist() if hasattr(value, "tolist") else value for name, value in scene.statement.items()}
+        said.add_itxt(STATEMENT_CHUNK, json.dumps({"statement": plain}, sort_keys=True))
     handle, aside = tempfile.mkstemp(prefix=f".{path.name}-", suffix=".part", dir=path.parent)
     try:
         with os.fdopen(handle, "wb") as file:

@@ -92,7 +92,7 @@ class Controller:
         """Return the scene with the parts that are switched off left empty."""
         scene = self.scene
         if not self.isosurface:
-            scene = replace(scene, isosurface=pv.PolyData())
+            scene = replace(scene, isosurface=pv.PolyData(), hidden=True)
         return scene if self.lines else replace(scene, lines=pv.PolyData())
 
     def status(self) -> str:
@@ -106,7 +106,7 @@ class Controller:
 
     def level_text(self) -> str:
         """Return what the isosurface shows, or that it is switched off."""
-        return self.scene.level_text() if self.isosurface else "isosurface off"
+        return self.shown().level_text()
 
     def picture_name(self) -> str:
         """Return a file name for a picture of the current slice, without ending."""
