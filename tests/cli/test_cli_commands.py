@@ -133,12 +133,62 @@ def test_what_is_given_is_not_asked(stick: Path, tmp_path: Path, prompts: list[s
 
 def test_answers_typed_at_the_questions_are_used(stick: Path, tmp_path: Path) -> None:
     """A wrong answer is asked again; the questions do not mix with the results."""
-    typed = "My field\nfast\n250\n0.3\n4\n0.5\none-way\n"
+    typed = "My field\nfast\n250\n0.3\n0.5\n4\none-way\n"
     done = run("new", tmp_path / "site", "--lines", stick, input=typed)
     assert done.exit_code == 0, done.stderr
     assert "My field" in (tmp_path / "site" / "survey.toml").read_text()
     assert "centre_frequency_mhz = 250.0" in (tmp_path / "site" / "survey.toml").read_text()
     assert "Centre frequency" not in done.stdout
+    assert (tmp_path / "site" / "lines.csv").read_text().splitlines()[2] == "A,2,lines/L2.sgy,0,0.5,4,0.5"
+
+
+def test_new_asks_in_the_order_of_its_help(stick: Path, tmp_path: Path, prompts: list[str]) -> None:
+    """Spacing comes before length in both."""
+    run("new", tmp_path / "site", "--lines", stick)
+    assert [text.split(" ")[0] for text in prompts] == ["What", "Centre", "Distance", "Distance", "Length", "Walked"]
+    text = run("new", "--help").output.split("Example")[0]
+    options = ["--title", "--frequency-mhz", "--separation-m", "--spacing-m", "--length-m", "--walk "]
+    places = [text.index(f"  {option}") for option in options]
+    assert places == sorted(places)
+
+
+def test_new_says_once_that_the_interval_is_missing(tmp_path: Path) -> None:
+    """Five files without interval: one sentence, which names the option that mends it."""
+    for number in range(5):
+        write_empty_interval(tmp_path / "stick" / f"L{number}.sgy")
+    done = run("new", tmp_path / "site", "--lines", tmp_path / "stick", "--yes", "--quiet")
+    assert done.exit_code == 3
+    assert len(done.stderr.splitlines()) == 1
+    assert "the interval field of 5 line file(s) is empty; give it with --interval-ns" in done.stderr
+    done = run("new", tmp_path / "site", "--lines", tmp_path / "stick", "--yes", "--interval-ns", "0.25")
+    assert done.exit_code == 0, done.stderr
+    assert "sample_interval_ns = 0.25" in (tmp_path / "site" / "survey.toml").read_text()
+
+
+def test_new_asks_for_an_interval_the_files_do_not_give(tmp_path: Path) -> None:
+    """It is the first of still six questions; the title is not asked then, but taken from the folder."""
+    for number in range(3):
+        write_empty_interval(tmp_path / "stick" / f"L{number}.sgy")
+    typed = "0.25\n250\n0.3\n0.5\n4\none-way\n"
+    done = run("new", tmp_path / "site", "--lines", tmp_path / "stick", input=typed)
+    assert done.exit_code == 0, done.stderr
+    text = (tmp_path / "site" / "survey.toml").read_text()
+    assert "sample_interval_ns = 0.25" in text
+    assert "centre_frequency_mhz = 250.0" in text
+    assert 'title = "site"' in text
+
+
+def test_new_speaks_of_guesses_only_where_it_guessed(
+    stick: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """All six given, and the interval: nothing is left to correct."""
+    given = ["--title", "T", "--frequency-mhz", 400, "--separation-m", 0.16, "--spacing-m", 0.5, "--length-m", 4]
+    given += ["--walk", "zigzag", "--interval-ns", 0.25]
+    monkeypatch.chdir(tmp_path)
+    done = run("new", "site", "--lines", stick, "--yes", *given)
+    assert done.exit_code == 0, done.stderr
+    assert "guessed" not in done.stderr
+    assert "planum check site" in done.stderr
 
 
 def test_a_question_nobody_can_answer_names_the_way_out(stick: Path, tmp_path: Path) -> None:

@@ -11,7 +11,7 @@ import pytest
 from planum.errors import SurveyError
 from planum.lines.segy_write import write_segy
 from planum.pipeline.draft import Answers, draft, write_draft
-from planum.pipeline.found import line_files, look_through
+from planum.pipeline.found import Found, FoundLine, line_files, look_through
 from planum.survey.folder import read_survey
 
 N_SAMPLES = 128
@@ -151,6 +151,43 @@ def test_what_was_answered_is_not_called_guessed(folder: Path, tmp_path: Path) -
 
 
 @pytest.mark.parametrize(
+    ("spacing", "length", "says"),
+    [(20.0, 5.0, "swapped"), (2.5, 10.0, "more than 2 m"), (0.5, 0.2, "4 mm apart"), (0.25, 1.0, "")],
+)
+def test_unlikely_answers_are_questioned(
+    folder: Path, tmp_path: Path, spacing: float, length: float, says: str
+) -> None:
+    """51 traces on 0.2 m are 4 mm apart (closed form); 1 m, 0.25 m apart, is nothing to speak of."""
+    notes = draft(folder, Answers(line_spacing_m=spacing, line_length_m=length), site=tmp_path / "site").notes
+    told = " ".join(note.came for note in notes if note.severity == "warning")
+    assert (says in told) if says else not told
+
+
+@pytest.mark.parametrize(
+    ("measured", "interval_ns", "nominal", "says", "not_says"),
+    [
+        (360.0, 0.25, 400, "the ground has lowered", "samples"),
+        (455.0, 0.25, 500, "the ground has lowered", "samples"),
+        (260.0, 0.5, 300, "the ground has lowered", "samples"),
+        (420.0, 0.5, 500, "the ground has lowered", "samples"),
+        (2600.0, 0.1, 2500, "the nearest usual one", "lowered"),
+        (480.0, 0.6, 400, "fewer than 4 samples", "lowered"),
+    ],
+)
+def test_the_guessed_frequency_does_not_contradict_the_measured_one(
+    measured: float, interval_ns: float, nominal: float, says: str, not_says: str
+) -> None:
+    """The ground lowers a frequency; at 0.6 ns nothing above 1 / (4 x 0.6 ns) = 417 MHz is guessed."""
+    found = Found((FoundLine(Path("a"), None, 51, 128, interval_ns),), (), (), interval_ns, measured)
+    guessed = draft(found, site=Path("site")).guessed[0]
+    assert guessed.startswith(
+        f"centre_frequency_mhz {nominal}: measured is that the files are strongest near {measured:.0f}"
+    )
+    assert says in guessed
+    assert not_says not in guessed
+
+
+@pytest.mark.parametrize(
     ("shift", "turn"), [((0.0, 0.0), 0.0), ((565_000.0, 5_932_000.0), 0.0), ((565_000.0, 5_932_000.0), 0.7)]
 )
 def test_coordinates_in_the_files_give_places_and_spacing(
@@ -176,8 +213,17 @@ def test_coordinates_in_the_files_give_places_and_spacing(
     assert [round(r.end[0] - r.start[0]) for r in made.rows] == [10, -10, 10]
     np.testing.assert_allclose([r.start[1] for r in made.rows], [0.0, 0.5, 1.0], atol=0.02)
     assert max(abs(v) for r in made.rows for v in (*r.start, *r.end)) < 11.0
+    told = [note for note in made.notes if "coordinates begin at" in note.came]
+    assert len(told) == (shift[0] > 0)
+    assert all(f"E {shift[0]:.2f} N {shift[1]:.2f}" in note.came and "positions" in note.do for note in told)
     write_draft(made)
     assert len(read_survey(tmp_path / "site").rows) == 3
+    # what the note promises: both lines wait in the draft, and it is still a survey with them
+    toml = tmp_path / "site" / "survey.toml"
+    kept = toml.read_text().replace("# positions =", "positions =").replace("# crs =", "crs =")
+    toml.write_text(kept)
+    config = read_survey(tmp_path / "site").config
+    assert (config.grid[0].positions, config.survey.crs) == ("header", "EPSG:25832")
 
 
 def test_crossing_lines_are_placed_by_spacing_instead(tmp_path: Path) -> None:

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 
 import click
 
+from planum.errors import SurveyError
 from planum_cli import options
 from planum_cli.running import count, quoted
 from planum_cli.talk import Talk
@@ -17,6 +18,7 @@ if TYPE_CHECKING:
     from planum.pipeline.found import Found
 
 MOST_QUESTIONS = 6
+INTERVAL = click.FloatRange(0, 100, min_open=True)
 
 
 @click.command(
@@ -50,7 +52,7 @@ MOST_QUESTIONS = 6
 @click.option(
     "--interval-ns",
     metavar="NS",
-    type=click.FloatRange(0, 100, min_open=True),
+    type=INTERVAL,
     help="Time between samples, where the files do not say it.",
 )
 @options.manner
@@ -73,11 +75,23 @@ def command(talk: Talk, folder: Path, lines: Path, yes: bool, interval_ns: float
         line_length_m=given["length_m"],
         walk=given["walk"],
     )
-    with talk.progress() as progress:
-        found = look_through(lines, interval_ns=interval_ns, progress=progress)
+
+    def look(interval_ns: float | None) -> Found:
+        with talk.progress() as progress:
+            return look_through(lines, interval_ns=interval_ns, progress=progress)
+
+    most = MOST_QUESTIONS
+    try:
+        found = look(interval_ns)
+    except SurveyError as silent:
+        if yes or interval_ns is not None or not any(p.key == "sample_interval_ns" for p in silent.problems):
+            raise
+        talk.say("the interval field of the line files is empty: it is the recording window over the number of samples")
+        found = look(click.prompt("Time between samples, ns", type=INTERVAL, err=True))
+        most -= 1
     talk.say(_seen(found))
     if not yes:
-        answers = _ask(talk, found, answers, folder)
+        answers = _ask(talk, found, answers, folder, most)
     made = draft(found, answers, site=folder)
     with talk.progress() as progress:
         write_draft(made, progress=progress)
@@ -102,8 +116,8 @@ def _seen(found: Found) -> str:
     return text
 
 
-def _ask(talk: Talk, found: Found, answers: Answers, folder: Path) -> Answers:
-    """Ask what is not given, with a guess to accept by the return key; at most six questions."""
+def _ask(talk: Talk, found: Found, answers: Answers, folder: Path, most: int) -> Answers:
+    """Ask what is not given, a guess to accept by the return key; of more than ``most`` questions not the first."""
     from planum.pipeline.draft import guesses
 
     guess = guesses(found, folder)
@@ -113,13 +127,11 @@ def _ask(talk: Talk, found: Found, answers: Answers, folder: Path) -> Answers:
         ("antenna_separation_m", "Distance from transmitter to receiver, m", click.FloatRange(0, 10)),
     ]
     if found.placed is None:
-        questions.append(("line_length_m", "Length of a line, m", click.FloatRange(0.1, 10000)))
-        if len(found.lines) > 1:
-            questions += [
-                ("line_spacing_m", "Distance between lines, m", click.FloatRange(0.01, 100)),
-                ("walk", "Walked zigzag (every second line back) or one-way", click.Choice(["zigzag", "one-way"])),
-            ]
-    wanted = [q for q in questions if getattr(answers, q[0]) is None][:MOST_QUESTIONS]
+        length = ("line_length_m", "Length of a line, m", click.FloatRange(0.1, 10000))
+        spacing = ("line_spacing_m", "Distance between lines, m", click.FloatRange(0.01, 100))
+        walk = ("walk", "Walked zigzag (every second line back) or one-way", click.Choice(["zigzag", "one-way"]))
+        questions += [spacing, length, walk] if len(found.lines) > 1 else [length]
+    wanted = [q for q in questions if getattr(answers, q[0]) is None][-most:]
     if wanted:
         talk.say("the return key takes the guess in brackets; everything can be changed later")
     for key, text, kind in wanted:
@@ -137,6 +149,8 @@ def _tell(talk: Talk, made: Draft, folder: Path) -> None:
     talk.result(f"{copied}{quoted(folder / 'survey.toml')} and {quoted(folder / 'lines.csv')} are drafted")
     first = folder / made.files[0][1]
     talk.next(
-        f"open both files and correct what was guessed, then planum check {quoted(folder)}",
+        f"open both files and correct what was guessed, then planum check {quoted(folder)}"
+        if made.guessed
+        else f"planum check {quoted(folder)}   says what a map would hold, and what is wrong",
         f"planum look {quoted(first)}   to see the first line",
     )

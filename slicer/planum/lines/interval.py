@@ -9,10 +9,13 @@ from planum.constants import SAMPLES_PER_PERIOD_GOOD, SAMPLES_PER_PERIOD_LEAST, 
 from planum.errors import LineError, Problem
 from planum.lines.recording import IntervalUnit, ReadOptions, Recording
 
-__all__ = ["NS_PER", "check_interval", "likely_units", "resolve_interval"]
+__all__ = ["NO_INTERVAL", "NS_PER", "check_interval", "likely_units", "resolve_interval"]
 
 NS_PER: dict[str, float] = {"ps": 1e-3, "ns": 1.0, "us": 1e3}
 """Nanoseconds per unit of the interval field."""
+
+NO_INTERVAL = "the file gives no sample interval"
+"""What is said of a file whose interval nobody knows."""
 
 _WINDOW = f"a window lies between {WINDOW_NS[0]:g} and {WINDOW_NS[1]:g} ns"
 
@@ -48,7 +51,7 @@ def resolve_interval(
     if field <= 0:
         raise LineError(
             Problem(
-                came="the file gives no sample interval",
+                came=NO_INTERVAL,
                 do="set sample_interval_ns for this radar",
                 file=file,
                 key="sample_interval_ns",

@@ -16,7 +16,7 @@ from pathlib import Path
 from typing import Literal
 
 from planum.errors import MachineError, Problem, SurveyError, printable
-from planum.pipeline.found import Found, FoundLine, look_through
+from planum.pipeline.found import LOWERED, Found, FoundLine, look_through
 from planum.survey.config import name_or_complaint
 from planum.survey.register import RegisterRow
 from planum.survey.safety import is_device
@@ -33,6 +33,12 @@ TRACE_SPACING_M = 0.02
 """Assumed between traces when nobody says how long the lines are (common practice for hand-drawn antennas)."""
 LINE_SPACING_M = 0.5
 """Assumed between lines when nobody says (the coarse spacing of common practice)."""
+FAR_LINES_M = 2.0
+"""Lines farther apart are hardly meant to be mapped together (common practice is 0.25 to 1 m)."""
+CLOSE_TRACES_M = 0.005
+"""Traces closer than this are hardly a walked line's (common practice is 1 to 5 cm)."""
+ROUNDED_M = 0.01
+"""Drafted places are rounded to the millimetre: coordinates this near to them are the same ones."""
 SHORT = 0.9
 """Share of the usual trace count below which a line is drafted as a shorter one."""
 _SPREAD = 3
@@ -128,7 +134,7 @@ def draft(lines: Path | Found, answers: Answers = Answers(), *, site: Path) -> D
         files=tuple(files.items()),
         rows=tuple(rows),
         guessed=said,
-        notes=(*found.problems, *notes),
+        notes=(*found.problems, *notes, *_kept(found), *_unlikely(found, full, given)),
         copies=not _inside(found, site),
     )
 
@@ -263,10 +269,7 @@ def _guessed(found: Found, full: Answers, given: dict[str, object]) -> list[str]
     """Sentences on what nobody said."""
     out = []
     if "centre_frequency_mhz" not in given:
-        out.append(
-            f"centre_frequency_mhz {full.centre_frequency_mhz:g}: the files are strongest near"
-            f" {found.strongest_mhz:.0f} MHz, and the ground lowers it"
-        )
+        out.append(f"centre_frequency_mhz {full.centre_frequency_mhz:g}: {_why_frequency(found)}")
     if "antenna_separation_m" not in given:
         out.append(f"antenna_separation_m {full.antenna_separation_m:g}: usual at this frequency")
     if found.units:
@@ -285,6 +288,44 @@ def _guessed(found: Found, full: Answers, given: dict[str, object]) -> list[str]
     if "walk" not in given and len(found.lines) > 1:
         out.append("lines.csv: walked zigzag, every second line back")
     return out
+
+
+def _why_frequency(found: Found) -> str:
+    """Say what was measured, and why another number is guessed from it."""
+    measured, nominal = found.strongest_mhz, found.nominal_mhz
+    text = f"measured is that the files are strongest near {measured:.0f} MHz"
+    if nominal < LOWERED * measured:
+        return f"{text}; guessed is the antenna, whose usual frequencies above have fewer than 4 samples a period here"
+    if measured < nominal:
+        return f"{text}; guessed is the antenna, the nearest usual one whose frequency the ground has lowered"
+    return f"{text}; guessed is the antenna, the nearest usual one"
+
+
+def _kept(found: Found) -> list[Problem]:
+    """Say what becomes of coordinates in the files that the drafted local places do not show."""
+    first = found.lines[0].start
+    if found.placed is None or first is None or math.dist(first, found.placed[0][0]) <= ROUNDED_M:
+        return []
+    came = f"the files' coordinates begin at E {first[0]:.2f} N {first[1]:.2f}; lines.csv holds local places instead"
+    do = 'they are kept when the survey says positions = "header" and names a crs: both lines wait in survey.toml'
+    return [Problem(came, do=do, severity="note")]
+
+
+def _unlikely(found: Found, full: Answers, given: dict[str, object]) -> list[Problem]:
+    """Warn of lengths and spacings that a person gave, or the coordinates, and that are hardly meant so."""
+    length, spacing = full.line_length_m or 0.0, full.line_spacing_m or 0.0
+    several, placed = len(found.lines) > 1, found.placed is not None
+    spaced, long = several and ("line_spacing_m" in given or placed), "line_length_m" in given or placed
+    traces = length / max(found.n_traces - 1, 1)
+    told = []
+    if spaced and long and spacing > length:
+        told.append(f"lines are {spacing:g} m apart and only {length:g} m long: are spacing and length swapped?")
+    if spaced and spacing > FAR_LINES_M:
+        told.append(f"lines are {spacing:g} m apart, more than {FAR_LINES_M:g} m: between them nothing will be known")
+    if long and traces < CLOSE_TRACES_M:
+        told.append(f"{found.n_traces} traces on {length:g} m are {1e3 * traces:.2g} mm apart, closer than 5 mm")
+    do = "correct lines.csv, or draft again with other numbers"
+    return [Problem(came, do=do, severity="warning") for came in told]
 
 
 def _title(site: Path) -> str:

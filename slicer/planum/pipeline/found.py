@@ -14,6 +14,7 @@ import numpy as np
 from planum.constants import SAMPLES_PER_PERIOD_LEAST
 from planum.cube.geometry import OBLIQUE
 from planum.errors import LineError, Problem, SurveyError
+from planum.lines.interval import NO_INTERVAL
 from planum.lines.reading import parts_in, read_line
 from planum.lines.recording import IntervalUnit, ReadOptions, Recording
 from planum.outputs.look import amplitude_spectrum, thinned
@@ -185,12 +186,27 @@ def look_through(folder: Path, *, interval_ns: float | None = None, progress: Pr
         if len(spectra) < _SPECTRA:
             spectra.append(_spectrum(recording))
     if not lines:
-        raise SurveyError([Problem("no line file here can be read", file=str(folder)), *problems])
+        raise _nothing(folder, len(files), problems)
     placed, why = _placed(lines)
     if why:
         problems.append(Problem(why, do="places are drafted from spacing and length instead", severity="note"))
     strongest = float(np.median([f[np.argmax(a)] for f, a in spectra])) * 1e3
     return Found(tuple(lines), tuple(problems), tuple(sorted(units or ())), interval_ns, strongest, placed)
+
+
+def _nothing(folder: Path, count: int, problems: Sequence[Problem]) -> SurveyError:
+    """Return why no file can be used; an interval that all or some of them lack is told once, first."""
+    silent = [p for p in problems if p.came == f"left out: {NO_INTERVAL}"]
+    if not silent:
+        return SurveyError([Problem("no line file here can be read", file=str(folder)), *problems])
+    of = "" if len(silent) == count else f" of {count}"
+    first = Problem(
+        f"the time between samples is missing: the interval field of {len(silent)}{of} line file(s) is empty",
+        do="give it with --interval-ns, in ns: the recording window over the number of samples",
+        file=str(folder),
+        key="sample_interval_ns",
+    )
+    return SurveyError([first, *(p for p in problems if p not in silent)])
 
 
 def _read(file: Path, interval_ns: float | None) -> tuple[set[str], list[FoundLine], Recording]:

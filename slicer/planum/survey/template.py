@@ -63,7 +63,12 @@ def survey_toml(draft: SurveyDraft) -> str:
         "[survey]",
         _line("title", draft.title, "used in reports"),
         _line("code", draft.code, "used in file names: 1 to 16 letters, digits, _ and -"),
-        _line("crs", draft.crs, "system of control.csv; without it outputs stay in the local frame", '"EPSG:25832"'),
+        _line(
+            "crs",
+            draft.crs,
+            "system of control.csv and positions; without it outputs stay in the local frame",
+            '"EPSG:25832"',
+        ),
         "",
         "[[radar]]                         # one table per antenna",
         _line("centre_frequency_mhz", draft.centre_frequency_mhz, "needed: nominal centre frequency", "400"),
@@ -116,6 +121,7 @@ def _grid(grid: GridDraft) -> list[str]:
         ]
     return [
         *lines,
+        _line("positions", None, "places from coordinates in the line files; name their crs above", '"header"'),
         _line("trace_spacing_m", None, "from trace to trace", "0.02"),
         _line("cell_m", None, "cell of the maps; a fifth of the line spacing otherwise", "0.05"),
     ]
