@@ -84,7 +84,7 @@ def test_a_record_that_still_falls_at_its_end_has_no_noise(loss, n):
     assert GAIN.limit_ns(f, GAIN.Params()) is None
     (problem,) = GAIN.notes(f, GAIN.Params())
     assert problem.severity == "note"
-    assert f"at the end of the record, {TIME[n - 1]:.1f} ns, the signal is still falling" in problem.came
+    assert f"the record ends at {TIME[n - 1]:.1f} ns before its level has become even" in problem.came
 
 
 @pytest.mark.parametrize("power", [0.0, 1.0, 2.0])

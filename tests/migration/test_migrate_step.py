@@ -74,6 +74,31 @@ def test_without_a_velocity_it_says_what_to_do(cube):
         MIGRATE(cube)
 
 
+@pytest.mark.parametrize(
+    ("typed", "match"),
+    [
+        (
+            {"velocity_m_per_ns": 0.5},
+            r"velocity_m_per_ns = 0\.5; allowed: 0\.03 to 0\.29.*mend the value, or leave it out",
+        ),
+        ({"velocity_m_per_ns": 0.0}, r"velocity_m_per_ns = 0\.0"),
+        ({"max_dip_deg": 90.0}, r"max_dip_deg = 90\.0"),
+        ({"edge_taper_m": -1.0}, r"edge_taper_m = -1\.0"),
+        ({"highest_ghz": 0.0}, r"highest_ghz = 0\.0"),
+    ],
+)
+def test_settings_that_cannot_be_right_are_refused_as_they_are_typed(typed, match):
+    with pytest.raises(ValidationError, match=match):
+        MigrateParams(**typed)
+
+
+def test_a_band_without_the_pulse_is_refused_once_the_antenna_is_known():
+    """400 MHz typed as 0.04: nothing but silence would come out."""
+    with pytest.raises(RecipeError, match=r"highest_ghz is 0\.04 for an antenna of 0\.4 GHz; at least half"):
+        MIGRATE.learn(facts(), MigrateParams(highest_ghz=0.04))
+    assert MIGRATE.learn(facts(), MigrateParams(highest_ghz=0.2)).highest_ghz == 0.2
+
+
 def test_unknown_setting_is_refused(cube):
     with pytest.raises(ValidationError, match="speed"):
         MIGRATE(cube, velocity_m_per_ns=0.1, speed=3)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 import tomllib
 from dataclasses import replace
 from typing import Any
@@ -12,7 +13,7 @@ import pytest
 from planum import schema
 from planum.engine.steps import get_step
 from planum.errors import RecipeError
-from planum.pipeline.recipe import resolve_chain, settings, settings_text, toml
+from planum.pipeline.recipe import chain_notes, limit_ns, resolve_chain, settings, settings_text, toml
 from planum.records import CubeGeometry, SetFacts, StepSpec, Velocity
 from planum.survey.config import DEFAULT_STEPS, Recipe
 from planum.synthetic.modelling import ricker_spectrum
@@ -82,6 +83,52 @@ def test_all_mistakes_are_told_at_once() -> None:
     assert {p.file for p in own} == {"site/survey.toml"}
     unknown = next(p for p in caught.value.problems if p.key == "recipe.dewow.window")
     assert unknown.allowed == "did you mean 'window_ns'?"
+
+
+@pytest.mark.parametrize(
+    ("step", "typed", "key", "came"),
+    [
+        ("gain", {"start_ns": 20.0, "stop_ns": 10.0}, "start_ns", "start_ns is 20 and stop_ns 10"),
+        ("bandpass", {"low_pass_ghz": 0.6, "high_pass_ghz": 0.5}, "low_pass_ghz", "corner frequencies low_pass"),
+        ("background", {"scope": "line"}, "window_m", 'scope is "line" without window_m'),
+        ("migrate", {"velocity_m_per_ns": 0.5}, "velocity_m_per_ns", "velocity_m_per_ns = 0.5"),
+        ("migrate", {"max_dip_deg": 95.0, "dip_taper_deg": 0.0}, "max_dip_deg", "max_dip_deg = 95.0"),
+        ("migrate", {"highest_ghz": 0.15}, "highest_ghz", "highest_ghz is 0.15 for an antenna of 0.4 GHz"),
+    ],
+)  # fmt: skip
+def test_what_a_step_refuses_comes_with_file_and_key(step: str, typed: dict[str, Any], key: str, came: str) -> None:
+    """Before anything is read: what came, what is allowed, what to do."""
+    with pytest.raises(RecipeError, match=re.escape(came)) as caught:
+        settings({step: typed}, file="site/survey.toml", centre_ghz=[0.4, 0.2])
+    first = caught.value.problems[0]
+    assert (first.file, first.key) == ("site/survey.toml", f"recipe.{step}.{key}")
+    assert first.came.startswith(came)
+    assert first.allowed
+    assert first.do
+    if came.startswith("highest"):
+        assert len(caught.value.problems) == 1  # for the antenna of 0.2 GHz it is allowed
+
+
+def test_notes_are_told_in_the_order_of_the_steps() -> None:
+    """Twelve lines, a record that ends above its noise and no spectrum: each step says its own."""
+    known = replace(facts(loss_db_per_ns=0.1), spectrum=np.zeros(120))
+    chosen = settings({})
+    told = chain_notes(chosen, known)
+    assert [p.key for p in told] == ["recipe.gain.stop_ns", "recipe.bandpass", "recipe.background"]
+    assert [p.severity for p in told] == ["note", "note", "warning"]
+    assert [p.key for p in chain_notes(chosen, known, until="background")] == [p.key for p in told[:2]]
+    assert chain_notes(settings({"steps": ["dewow", "envelope"]}), known) == ()
+
+
+def test_limit_is_measured_or_not_known() -> None:
+    """Twice the noise of 5 is met where 1e4 / t falls to 8.7 (the root of 10² - 5²), whatever stop was typed."""
+    time = GEOMETRY.times()
+    known = facts(loss_db_per_ns=1.2)
+    meets = time[np.flatnonzero(known.envelope > 10.0)[-1]]
+    for recipe in ({}, {"gain": {"stop_ns": 55.0}}):
+        assert limit_ns(settings(recipe), known) == pytest.approx(meets, abs=2 * GEOMETRY.time_step_ns)
+    assert limit_ns(settings({}), facts(loss_db_per_ns=0.1)) is None
+    assert limit_ns(settings({"steps": ["dewow", "envelope"]}), known) is None
 
 
 def test_every_automatic_number_is_filled_in() -> None:

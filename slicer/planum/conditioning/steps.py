@@ -119,7 +119,7 @@ class Gain:
         if self.limit_ns(facts, params) is None:
             problems.append(
                 Problem(
-                    came=f"at the end of the record, {facts.geometry.times()[-1]:.1f} ns, the signal is still falling:"
+                    came=f"the record ends at {facts.geometry.times()[-1]:.1f} ns before its level has become even:"
                     " where noise begins is not known",
                     do="no limit of depth is stated; a longer window would show it",
                     key="recipe.gain.stop_ns",
