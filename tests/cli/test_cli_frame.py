@@ -139,7 +139,7 @@ def test_each_class_of_error_has_its_exit_code_and_one_line_per_problem(raising,
 @pytest.mark.parametrize(
     ("error", "says"),
     [
-        (OSError(errno.ENOSPC, "No space left on device", "/x/y"), "the disk is full"),
+        (OSError(errno.ENOSPC, "No space left on device", "/x/y"), "/x: the disk of this folder is full"),
         (PermissionError(errno.EACCES, "Permission denied", "/x/y"), "no permission"),
         (FileNotFoundError(errno.ENOENT, "No such file or directory", "/x/y"), "No such file"),
         (MemoryError(), "--workers 1"),
@@ -154,6 +154,38 @@ def test_the_machine_and_the_unforeseen_are_one_sentence_and_code_4(raising, err
     assert says in done.stderr
     assert len(done.stderr.splitlines()) == 1
     assert "Traceback" not in done.stderr
+
+
+def test_a_full_disk_is_named_by_the_folder_that_was_written_to(raising, tmp_path) -> None:
+    """A copy from the cache to another disk fills that disk (shutil names the source first)."""
+    full = errno.ENOSPC, "No space left on device"
+    building = tmp_path / "far" / ".out-0123456789abcdef" / "pictures" / "a.png"
+    said = raising(OSError(*full, "/site/work/sections/k.png", None, str(building))).stderr
+    assert said.startswith(f"error: {tmp_path / 'far' / 'out'}: the disk of this folder is full")
+    assert "--out DIR" in said
+    assert "tidy" not in said
+    wrapped = MachineError(Problem("cannot write", file=str(building)))
+    for cause in (OSError(*full, str(building)), OSError("Can't write data (No space left on device)")):
+        wrapped.__cause__ = cause
+        done = raising(wrapped)
+        assert done.exit_code == 4
+        assert done.stderr == said
+
+
+def test_a_full_disk_under_the_work_folder_is_the_surveys_own(raising, tmp_path) -> None:
+    """There --out would not help."""
+    (tmp_path / "work").mkdir()
+    (tmp_path / "work" / "CACHEDIR.TAG").touch()
+    said = raising(OSError(errno.ENOSPC, "No space left", str(tmp_path / "work" / "rows" / "k.npy"))).stderr
+    assert said.startswith(f"error: {tmp_path / 'work'}: the disk of this work folder is full")
+    assert "--out" not in said
+
+
+def test_an_error_of_the_survey_that_came_after_a_full_disk_stays_what_it_is(raising) -> None:
+    """Only the machine's errors are looked behind."""
+    error = SurveyError(Problem("no line"))
+    error.__context__ = OSError(errno.ENOSPC, "No space left on device")
+    assert raising(error).stderr == "error: no line\n"
 
 
 @pytest.mark.parametrize("place", ["behind", "before", "environment"])

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import errno
 import json
 import multiprocessing
 import os
@@ -19,7 +20,7 @@ import rasterio
 import xarray as xr
 
 from planum.errors import PlanumError, Problem, RecipeError, SurveyError
-from planum.pipeline import census, passes
+from planum.pipeline import census, passes, products
 from planum.pipeline.cubes import open_cube
 from planum.pipeline.run import RunResult, map_site, plan_site, read_run
 from planum.synthetic.folder import write_survey
@@ -204,6 +205,26 @@ def test_unreadable_line_is_set_aside(page: Path, tmp_path: Path, no_isosurface:
         assert np.isnan(float(middle.sel(y=2.0, method="nearest")))
         assert np.isfinite(float(middle.sel(y=1.75, method="nearest")))
         assert int((data.coverage.sel(y=2.0, method="nearest") == 0).all())
+
+
+def test_a_full_disk_leaves_the_former_run_and_nothing_half(
+    scrap: Path, tmp_path: Path, no_isosurface: None, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """The disk fills up while the GeoPackage is written: the half folder goes, so that it does not fill it further."""
+    site = copied(scrap, tmp_path)
+
+    def full(path: Path, *_: object, **__: object) -> None:
+        assert path.parent.name.startswith(".out-")
+        assert any(path.parent.iterdir())
+        raise OSError(errno.ENOSPC, "No space left on device", str(path))
+
+    with monkeypatch.context() as patch:
+        patch.setattr(products, "write_geopackage", full)
+        with pytest.raises(OSError, match="No space left"):
+            map_site(site)
+    assert not list(site.glob(".out*"))
+    assert not (site / "out").exists()
+    assert is_whole(map_site(site).out)
 
 
 def test_no_usable_line_is_an_error(page: Path, tmp_path: Path) -> None:

@@ -96,7 +96,11 @@ def aside(final: Path, token: str) -> Path:
     folder = final.parent / f".{final.name}-{token}"
     shutil.rmtree(folder, ignore_errors=True)
     folder.mkdir(parents=True)
-    (folder / MARK).touch()
+    try:
+        (folder / MARK).touch()
+    except OSError:  # a folder without the mark would never be swept
+        folder.rmdir()
+        raise
     return folder
 
 

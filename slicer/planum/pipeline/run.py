@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import json
 import os
+import shutil
 from collections.abc import Callable, Sequence
 from concurrent.futures import Executor, ThreadPoolExecutor
 from dataclasses import dataclass, field, replace
@@ -136,8 +137,12 @@ def _run(
             )
         )
     folder = exchange.aside(final, token)
-    run = write_products(folder, stack, run, sections=sections, token=token, progress=progress)
-    (folder / exchange.MARK).unlink()
+    try:
+        run = write_products(folder, stack, run, sections=sections, token=token, progress=progress)
+        (folder / exchange.MARK).unlink()
+    except BaseException:
+        shutil.rmtree(folder, ignore_errors=True)  # half a result is no use, and on a full disk it is in the way
+        raise
     exchange.publish(folder, final)
     return RunResult(final, run.set_aside, run.warnings, changed=True, summary=run.summary())
 
