@@ -105,4 +105,6 @@ def _of_system(error: OSError) -> Problem:
     name = os.fspath(error.filename) if isinstance(error.filename, str | os.PathLike) else ""
     if error.errno in _FORBIDDEN:
         return Problem("no permission", do="choose a folder you may write to, or close the program using it", file=name)
+    if error.errno == errno.ENOENT and name and not (folder := Path(name).parent).exists():
+        return Problem("the folder does not exist", do="make it, or name another", file=str(folder))
     return Problem(error.strerror or printable(error) or "the system refused", do="look at the path", file=name)

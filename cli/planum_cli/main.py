@@ -145,7 +145,11 @@ def _stopped(talk: Talk, stop: BaseException) -> int:
         return codes.USAGE
     if talk.debug:
         traceback.print_exception(stop)
-    click.echo("stopped; the former run is untouched", err=True)
+    left = ""
+    if talk.run is not None:
+        there = (talk.run / "run.json").is_file()
+        left = "; the former run is untouched" if there else "; there is no run yet, and the next goes on from here"
+    click.echo(f"stopped{left}", err=True)
     return codes.INTERRUPTED
 
 

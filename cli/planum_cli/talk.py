@@ -20,6 +20,7 @@ import warnings
 from collections.abc import Iterable, Iterator
 from contextlib import contextmanager, suppress
 from dataclasses import replace
+from pathlib import Path
 from typing import Any
 
 import click
@@ -147,6 +148,8 @@ class Talk:
     def __init__(self, *, quiet: bool = False, debug: bool | None = None) -> None:
         self.quiet = quiet
         self.debug = os.environ.get("PLANUM_DEBUG", "") not in ("", "0") if debug is None else debug
+        self.run: Path | None = None
+        """The run folder being made, if one is."""
         self._progress: Progress | None = None
         self._said: set[str] = set()
 

@@ -373,6 +373,14 @@ def test_look_does_not_draw_over_the_line_file(stick: Path) -> None:
     assert (stick / "L1.sgy").read_bytes() == before
 
 
+def test_look_does_not_make_a_folder_for_its_picture(stick: Path, tmp_path: Path) -> None:
+    """A mistyped folder is named as one that does not exist, before the line is read."""
+    done = run("look", stick / "L1.sgy", "--picture", tmp_path / "nodir" / "x.png")
+    assert done.exit_code == 2
+    assert f"the folder {tmp_path / 'nodir'} does not exist" in " ".join(done.stderr.split())
+    assert not (tmp_path / "nodir").exists()
+
+
 def test_look_refuses_two_ways_to_say_one_thing(stick: Path) -> None:
     """Unit and interval exclude each other."""
     assert run("look", stick / "L1.sgy", "--unit", "ps", "--interval-ns", "1").exit_code == 2

@@ -141,7 +141,7 @@ def test_each_class_of_error_has_its_exit_code_and_one_line_per_problem(raising,
     [
         (OSError(errno.ENOSPC, "No space left on device", "/x/y"), "/x: the disk of this folder is full"),
         (PermissionError(errno.EACCES, "Permission denied", "/x/y"), "no permission"),
-        (FileNotFoundError(errno.ENOENT, "No such file or directory", "/x/y"), "No such file"),
+        (FileNotFoundError(errno.ENOENT, "No such file or directory", "/y"), "/y: No such file"),
         (MemoryError(), "--workers 1"),
         (ZeroDivisionError("division by zero"), "something unforeseen happened (ZeroDivisionError: division by zero)"),
         (KeyError("a\nb"), "--debug"),
@@ -204,11 +204,31 @@ def test_debug_shows_the_traceback(raising, monkeypatch, tmp_path, place) -> Non
     assert "ZeroDivisionError: none" in done.stderr
 
 
-def test_an_interrupt_is_130_and_says_that_the_former_run_is_whole(raising) -> None:
-    """The reader who pressed the keys learns what became of the result."""
-    done = raising(KeyboardInterrupt())
+@pytest.mark.parametrize(("args", "folder"), [((), "out"), (("--name", "deep"), "out-deep")])
+def test_an_interrupt_is_130_and_says_what_became_of_the_run(raising, tmp_path, args, folder) -> None:
+    """The reader who pressed the keys learns whether there is a former run; none is promised where there is none."""
+    done = raising(KeyboardInterrupt(), *args)
     assert done.exit_code == 130
-    assert "stopped; the former run is untouched" in done.stderr
+    assert done.stderr.strip() == "stopped; there is no run yet, and the next goes on from here"
+    (tmp_path / folder).mkdir()
+    (tmp_path / folder / "run.json").touch()
+    assert raising(KeyboardInterrupt(), *args).stderr.strip() == "stopped; the former run is untouched"
+
+
+def test_an_interrupt_of_a_command_that_makes_no_run_promises_nothing(tmp_path, monkeypatch) -> None:
+    """Stopped is stopped."""
+
+    def stop(_: object) -> int:
+        raise KeyboardInterrupt
+
+    monkeypatch.setattr("planum.pipeline.tidy.tidy", stop)
+    assert run("tidy", str(tmp_path)).stderr.strip() == "stopped"
+
+
+def test_a_folder_that_does_not_exist_is_named_without_our_temporary_file(raising) -> None:
+    """What a library wanted to call its file is no help."""
+    said = raising(FileNotFoundError(errno.ENOENT, "No such file or directory", "/nodir/.x.png-k3x.part")).stderr
+    assert said == "error: /nodir: the folder does not exist; make it, or name another\n"
 
 
 @pytest.mark.parametrize(
@@ -405,6 +425,8 @@ def test_the_installed_command_tells_its_version() -> None:
 
 def test_tidy_tells_what_it_freed(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     """Bytes in a unit people read; a site without a work folder is no mistake."""
+    assert "is no survey folder" in run("tidy", str(tmp_path)).stderr
+    (tmp_path / "survey.toml").touch()
     assert "nothing to free" in run("tidy", str(tmp_path)).stdout
     monkeypatch.setattr("planum.pipeline.tidy.tidy", lambda _: 2_500_000)
     assert run("tidy", str(tmp_path)).stdout == "2.5 MB freed\n"

@@ -43,6 +43,12 @@ def test_nothing_to_tidy_is_no_mistake(site: Path) -> None:
     assert tidy(site) == 0
 
 
+def test_a_folder_that_is_no_survey_is_named(tmp_path: Path) -> None:
+    """Nothing to free there does not mean that the survey has nothing to free."""
+    with pytest.raises(SurveyError, match=r"is no survey folder.*survey\.toml"):
+        tidy(tmp_path)
+
+
 def test_a_folder_without_the_tag_is_not_ours(site: Path) -> None:
     """A person's own folder called work is left alone."""
     (site / "work" / "CACHEDIR.TAG").unlink()

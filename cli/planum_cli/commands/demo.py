@@ -64,6 +64,7 @@ def command(talk: Talk, folder: Path) -> int:
         talk.say(f"the example survey is in {quoted(folder)}: survey.toml and lines.csv are worth a look")
     else:
         talk.say(f"the example survey is already in {quoted(folder)}; going on from there")
+    talk.run = folder / "out"
     with talk.progress() as progress:
         result = map_site(folder, progress=progress)
     code = tell_run(talk, result, site=folder)

@@ -122,6 +122,8 @@ _TOLD = ("n_samples", "n_traces_found")
 def _refuse_overwriting(target: Path, file: Path) -> None:
     if target.suffix.lower() != ".png":
         raise click.BadParameter(f"{quoted(target)}: a picture's name ends in .png", param_hint="--picture")
+    if not target.parent.is_dir():
+        raise click.BadParameter(f"the folder {quoted(target.parent)} does not exist", param_hint="--picture")
     if target.exists() and target.samefile(file):
         raise click.BadParameter("the picture would overwrite the line file", param_hint="--picture")
 

@@ -59,6 +59,7 @@ def command(talk: Talk, site: Path, out: Path | None, name: str | None, **rest: 
         name = options.plain_name(name)
     if out is not None:
         _only_a_run(out)
+    talk.run = out if out is not None else site / (f"out-{name}" if name else "out")
     with talk.progress() as progress:
         result = map_site(site, out=out, name=name, progress=progress, **rest)
     return tell_run(talk, result, site=site, name=name, at_home=out is None)

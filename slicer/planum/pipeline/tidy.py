@@ -36,6 +36,7 @@ def tidy(site: Path) -> int:
     ------
     SurveyError
         When ``work`` is a link or no folder, or does not carry the tag this program puts there: then it is not ours.
+        When there is neither ``work`` nor ``survey.toml``: then it is another folder that is meant.
     MachineError
         When the system refuses to remove something.
     """
@@ -43,6 +44,9 @@ def tidy(site: Path) -> int:
     try:
         kind = work.lstat().st_mode
     except FileNotFoundError:
+        if not (Path(site) / "survey.toml").is_file():
+            do = "name the folder that holds survey.toml"
+            raise SurveyError(Problem("is no survey folder", "nothing was removed", do, file=str(site))) from None
         return 0
     _check(work, kind)
     freed = _bytes_in(work)
