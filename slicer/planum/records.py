@@ -381,10 +381,16 @@ class Statement(Record):
     survey: str = ""
     plan_key: str = ""
     version: str = ""
+    noise: str = Field("", description="where the slice lies to the depth at which ground sinks into noise")
+
+    @property
+    def in_noise(self) -> bool:
+        """Whether the slice lies where only strong reflectors show."""
+        return self.noise.startswith("below")
 
     def tags(self) -> dict[str, str]:
-        """Return upper-case TIFF tags."""
-        return {f"PLANUM_{k.upper()}": v for k, v in self._texts().items()}
+        """Return upper-case TIFF tags; what is empty has none, as TIFF readers drop empty ones."""
+        return {f"PLANUM_{k.upper()}": v for k, v in self._texts().items() if v}
 
     def attrs(self) -> dict[str, Any]:
         """Return attributes for NetCDF: numbers stay numbers."""
@@ -397,7 +403,8 @@ class Statement(Record):
             f" (± {self.depth_error_m:.2f} m) below {self.surface}, visit {self.date};"
             f" velocity {self.velocity_m_per_ns:.4f} ± {self.velocity_error_m_per_ns:.4f} m/ns"
             f" ({self.velocity_origin}); time zero: {self.zero_rule}, ± {self.zero_error_ns:.2f} ns;"
-            f" {self.migration}; {self.fill}; {self.coverage_rule}; {self.resolution}; {self.stretch}."
+            f" {self.migration}; {self.fill}; {self.coverage_rule}; {self.resolution};"
+            f"{f' {self.noise};' if self.noise else ''} {self.stretch}."
         )
 
     def _texts(self) -> dict[str, str]:

@@ -9,7 +9,7 @@ import pytest
 import rasterio
 from PIL import Image
 
-from planum.errors import PlanumError
+from planum.errors import MachineError, PlanumError
 from planum.outputs.about import READABLE, statement_in
 from planum.outputs.geopackage import LineShape, SiteShapes, write_geopackage
 from planum.outputs.geotiff import write_slices
@@ -18,6 +18,7 @@ from planum.outputs.pictures import draw_contact_sheet, draw_slices
 from planum.outputs.report import ReportContext, write_report
 from planum.outputs.stack import write_stack
 from planum.outputs.stretch import stretch_of
+from planum.outputs.writing import copy_png, save_png, statement_text
 
 
 @pytest.fixture(scope="module")
@@ -39,6 +40,8 @@ def run(tmp_path_factory, slices, statements):
 
 def test_files_of_one_slice_give_its_whole_statement(run, statements):
     expected = {k.removeprefix("PLANUM_").lower(): v for k, v in statements[2].tags().items()}
+    # numbers keep the digits their errors allow: 0.025 m and 0.12 ns at two significant digits
+    expected |= {"depth_error_m": "0.025", "zero_error_ns": "0.12", "velocity_m_per_ns": "0.0853"}
     for name in ("ASM2_d010-020cm.tif", "ASM2_d010-020cm_grey.tif", "ASM2_d010-020cm.png"):
         assert statement_in(run / name) == expected, name
 
@@ -52,6 +55,32 @@ def test_files_of_all_slices_agree(run, statements):
         assert found[name] == found["slices_all.tif"], name
     assert found["slices.nc"]["top_m"] == " | ".join(f"{s.top_m:.6g}" for s in statements)
     assert found["slices.nc"]["stretch"] == statements[0].stretch
+
+
+def test_numbers_keep_the_digits_their_errors_allow(tmp_path):
+    """Two significant digits of the error (common practice), the value to the same place; the rest as it stands."""
+    said = {"velocity_m_per_ns": 0.086813, "velocity_error_m_per_ns": 0.000816, "depth_error_m": [0.0367, 0.1234]}
+    (tmp_path / "run.json").write_text(json.dumps({"statement": {**said, "top_m": 0.123456}}), encoding="utf-8")
+    assert statement_in(tmp_path / "run.json") == {
+        "velocity_m_per_ns": "0.08681",
+        "velocity_error_m_per_ns": "0.00082",
+        "depth_error_m": "0.037 | 0.12",
+        "top_m": "0.123456",
+    }
+
+
+def test_a_copied_picture_keeps_its_pixels_and_gains_a_statement(tmp_path, statements):
+    picture = Image.fromarray(np.arange(256, dtype=np.uint8).reshape(16, 16))
+    save_png(tmp_path / "a.png", picture, title="A", sentence="Ü")
+    copy_png(tmp_path / "a.png", tmp_path / "b.png", statement=statement_text(statements[2]))
+    with Image.open(tmp_path / "b.png") as copied:
+        copied.load()
+        assert (copied.text["Title"], copied.text["Description"]) == ("A", "Ü")
+        np.testing.assert_array_equal(np.asarray(copied), np.asarray(picture))
+    assert statement_in(tmp_path / "b.png")["top_m"] == "0.1"
+    (tmp_path / "c.png").write_bytes(b"GIF")
+    with pytest.raises(MachineError, match="is no PNG"):
+        copy_png(tmp_path / "c.png", tmp_path / "d.png", statement="{}")
 
 
 def test_files_of_others_are_told_apart(tmp_path):

@@ -112,6 +112,58 @@ def test_nothing_is_fetched(page):
     assert "https://" not in page
 
 
+def test_embedded_pictures_open_large_and_sections_fold(tmp_path, statements):
+    """A picture inside the run's folder links to itself, one elsewhere does not; every other picture stays as it is."""
+    (tmp_path / "run" / "pictures").mkdir(parents=True)
+    inside, outside = tmp_path / "run" / "pictures" / "a b.png", tmp_path / "c.png"
+    for path in (inside, outside):
+        Image.new("L", (20, 10), 180).save(path)
+    context = ReportContext(
+        title="T",
+        code="C",
+        statements=statements,
+        contact=Picture(outside, "elsewhere"),
+        best=(Picture(inside, "A", "0.40 to 0.50 m, ± 0.03 m, visit 2026-04-18."),),
+        sections=(("A 1", "pictures/sections/A_line-1.png"), ("A 2", "pictures/sections/A_line-2.png")),
+    )
+    write_report(tmp_path / "run" / "report.html", context)
+    page = (tmp_path / "run" / "report.html").read_text(encoding="utf-8")
+    assert re.findall(r'<a href="([^"]*)"><img', page) == ["pictures/a%20b.png"]
+    assert "<figcaption>0.40 to 0.50 m, ± 0.03 m, visit 2026-04-18.</figcaption>" in page
+    assert re.search(r"<details><summary>2 sections</summary>\s*<ul", page)
+
+
+def test_growth_with_depth_is_said_only_where_it_is_so(tmp_path, statements):
+    def words(errors):
+        told = tuple(s.model_copy(update={"depth_error_m": e}) for s, e in zip(statements, errors, strict=True))
+        write_report(tmp_path / "r.html", ReportContext(title="T", code="C", statements=told))
+        return (tmp_path / "r.html").read_text(encoding="utf-8")
+
+    assert "grows with depth" in words((0.03, 0.03, 0.04, 0.05, 0.06))
+    for errors in ((0.04, 0.03, 0.03, 0.05, 0.06), (0.03,) * 5, (0.0301, 0.0302, 0.0303, 0.0304, 0.0305)):
+        assert "grows with depth" not in words(errors)
+
+
+def test_empty_columns_zeros_and_repetitions_are_dropped(tmp_path, statements):
+    told = tuple(s.model_copy(update={"velocity_origin": "measured: focus of diffractions"}) for s in statements)
+    context = ReportContext(
+        title="T",
+        code="C",
+        statements=told,
+        velocity="Focus of diffractions.",
+        problems=(Problem("odd", do="look", file="a.sgy"), Problem("odder", file="b.sgy")),
+        missing=("A 17",),
+    )
+    write_report(tmp_path / "r.html", context)
+    page = (tmp_path / "r.html").read_text(encoding="utf-8")
+    words = re.sub(r"\s+", " ", Page(page).words)
+    assert "What is allowed" not in page
+    assert "What to do" in page
+    assert "1 line is missing: what was found with the lines" in words
+    assert "set aside" not in words
+    assert words.casefold().count("focus of diffractions. ") == 1
+
+
 def test_wide_pictures_are_reduced(page):
     """2400 x 1200 becomes 1600 x 800."""
     assert {(i["width"], i["height"]) for i in Page(page).all("img")} == {("1600", "800")}

@@ -9,7 +9,7 @@ from scipy.ndimage import find_objects, label
 
 from planum.lines.recording import Recording
 from planum.outputs.look import amplitude_spectrum, draw_look, thinned
-from planum.outputs.section import DepthScale, draw_section, section_greys
+from planum.outputs.section import DepthScale, SectionText, draw_section, section_greys
 from planum.records import Velocity
 
 SCALE = DepthScale(Velocity.constant(0.1, 0.002, origin="measured"), 0.2, [(0.0, 0.5), (0.25, 0.75), (0.5, 1.0)])
@@ -44,7 +44,12 @@ def test_time_runs_down_and_distance_runs_right(tmp_path):
     block[80:, :10] = 0
     path = tmp_path / "a.png"
     draw_section(
-        path, {"raw": block, "migrated": block}, np.linspace(0, 10, 100), np.linspace(0, 40, 50), SCALE, title="A"
+        path,
+        {"raw": block, "migrated": block},
+        np.linspace(0, 10, 100),
+        np.linspace(0, 40, 50),
+        SCALE,
+        text=SectionText("A"),
     )
     picture = np.asarray(Image.open(path))
     boxes = panels_of(path)
@@ -61,7 +66,9 @@ def test_the_ruler_ends_where_a_depth_is_reached(tmp_path):
     """Slices 0 to 1 m at 0.1 m/ns and 0.2 m separation: t = 2 sqrt(d² + 0.1²) / v, from 2.0 to 20.1 ns."""
     path = tmp_path / "a.png"
     times = np.linspace(-2.0, 40.0, 200)
-    draw_section(path, {"raw": np.full((300, 200), 128, np.uint8)}, np.linspace(0, 10, 300), times, SCALE, title="A")
+    draw_section(
+        path, {"raw": np.full((300, 200), 128, np.uint8)}, np.linspace(0, 10, 300), times, SCALE, text=SectionText("A")
+    )
     picture = np.asarray(Image.open(path))
     rows, columns = panels_of(path)[0]
     # The frame's rows: time -2 and 40 ns lie on its first and last inner pixel; ticks hang below it.
@@ -78,7 +85,9 @@ def test_the_ruler_ends_where_a_depth_is_reached(tmp_path):
 def test_sections_are_the_same_twice_and_carry_their_text(tmp_path):
     arguments = ({"raw": panel()}, np.linspace(0, 5, 300), np.linspace(-1, 50, 200), SCALE)
     for name in ("a.png", "b.png"):
-        draw_section(tmp_path / name, *arguments, title="Grid A, line 3", statement="Migrated in 2-D, line by line.")
+        draw_section(
+            tmp_path / name, *arguments, text=SectionText("Grid A, line 3", "Ashwell", "Migrated in 2-D, line by line.")
+        )
     assert (tmp_path / "a.png").read_bytes() == (tmp_path / "b.png").read_bytes()
     with Image.open(tmp_path / "a.png") as picture:
         picture.load()
@@ -86,11 +95,27 @@ def test_sections_are_the_same_twice_and_carry_their_text(tmp_path):
         assert picture.text["Description"] == "Migrated in 2-D, line by line."
 
 
+def test_what_was_not_recorded_is_hatched_and_not_grey(tmp_path):
+    """The last quarter of the line: white with lines in every panel, where mid grey would pass for silent ground."""
+    recorded = np.arange(300) < 225
+    panels = {"raw": np.full((300, 200), 128, np.uint8), "migrated": np.full((300, 200), 128, np.uint8)}
+    axes = np.linspace(0, 10, 300), np.linspace(0, 40, 200)
+    draw_section(tmp_path / "a.png", panels, *axes, SCALE, text=SectionText("A"), recorded=recorded)
+    picture = np.asarray(Image.open(tmp_path / "a.png"))
+    boxes = panels_of(tmp_path / "a.png")
+    assert len(boxes) == 2
+    for rows, columns in boxes:
+        left = columns.start + 7  # the ticks of the times
+        inside = picture[rows.start + 1 : rows.start + 220, left + 1 : left + 929]
+        assert set(np.unique(inside[:, :690])) == {128}
+        assert set(np.unique(inside[:, 700:920])) == {205, 255}
+
+
 def test_impossible_sections_are_refused(tmp_path):
     with pytest.raises(ValueError, match="at least one panel"):
-        draw_section(tmp_path / "a.png", {}, np.arange(3), np.arange(3), SCALE, title="A")
+        draw_section(tmp_path / "a.png", {}, np.arange(3), np.arange(3), SCALE, text=SectionText("A"))
     with pytest.raises(ValueError, match="along runs from 3 to 0"):
-        draw_section(tmp_path / "a.png", {"raw": panel()}, np.array([3, 0]), np.arange(3), SCALE, title="A")
+        draw_section(tmp_path / "a.png", {"raw": panel()}, np.array([3, 0]), np.arange(3), SCALE, text=SectionText("A"))
 
 
 def recording(data: np.ndarray, interval_ns: float = 0.1) -> Recording:

@@ -16,12 +16,13 @@ import xarray as xr
 import planum
 from planum.constants import CAUTIONS
 from planum.errors import Problem
+from planum.outputs.about import statement_in
 from planum.outputs.stretch import Stretch
 from planum.pipeline import products
 from planum.pipeline.recipe import settings_text
 from planum.pipeline.run import RunResult, map_site, read_run
 from planum.pipeline.telling import Drawn, report_context
-from planum.pipeline.told import RunFacts, statements
+from planum.pipeline.told import RunFacts, noise_depth, statements
 from planum.records import CubeGeometry, Estimate, LineEntry, Plan, SetPlan, Similarity, StepSpec, Velocity
 
 STRETCH = Stretch(1.0, 9.0, "one linear stretch for all slices")
@@ -141,6 +142,28 @@ def test_least_certain_set_speaks_for_all() -> None:
         assert told.date == "2026-04-18, 2026-05-02"
 
 
+def test_noise_is_told_to_five_centimetres_and_marks_the_slices_below() -> None:
+    """A limit of 0.4788 m is told as 0.50 m; of slices in the middle at 0.45 and 0.55 m the second lies below."""
+    run = run_of(one_set("A/x", velocity=GOOD).model_copy(update={"limit_depth_m": 0.4788}))
+    above, below = statements(run.plan, stack(), STRETCH)
+    assert run.summary()["limit_depth_m"] == 0.5
+    assert (above.in_noise, below.in_noise) == (False, True)
+    said = "below the depth where ground sinks into noise (0.50 m): only strong reflectors show"
+    assert said in below.sentence()
+    assert below.tags()["PLANUM_NOISE"] == below.attrs()["noise"] == said
+    assert "only strong reflectors show" not in above.sentence()
+
+
+def test_the_shallowest_set_meets_noise_first_and_one_that_never_does_says_so() -> None:
+    a, b = one_set("A/x", velocity=GOOD), one_set("B/x", velocity=GOOD)
+    sets = [s.model_copy(update={"limit_depth_m": limit}) for s, limit in ((a, None), (b, 1.31))]
+    assert noise_depth(run_of(*sets).plan) == 1.3
+    never = run_of(sets[0])
+    assert noise_depth(never.plan) is None
+    (noise,) = {s.noise for s in statements(never.plan, stack(), STRETCH)}
+    assert noise == "ground stands above noise to the end of the record"
+
+
 # --- missing lines, summary, identity ---
 
 
@@ -203,6 +226,8 @@ def test_report_gathers_what_the_run_knows(tmp_path: Path) -> None:
     assert said.leading == ()
     assert said.focus is None
     assert [p.alt for p in said.best] == ["Slice 0.50 to 0.60 m"]
+    assert [p.caption for p in said.best] == ["0.50 to 0.60 m, ± 0.04 m, visit 2026-04-18."]
+    assert not [text for _, text in said.files if "`" in text]
     assert said.sections == (("A/x, line 1, y = 1.00 m", "pictures/sections/A-x_000_1.png"),)
     assert said.recipe[0] == ("dewow", settings_text({"window_ns": 5.1}))
     named = [name for name, _ in said.files]
@@ -231,6 +256,29 @@ def test_report_names_the_placing_of_every_grid(tmp_path: Path) -> None:
     assert said.control.rows == (("B", "P1", "0.012 m"), ("B", "P2", "0.020 m"))
 
 
+def test_rows_are_named_by_grid_direction_and_line_with_a_file_of_their_own() -> None:
+    """What a crew wrote on its sheet; names that differ in a disk's eyes only by case get a number."""
+    s = one_set("A/x", velocity=GOOD)
+    assert products.row_title(s, 2) == "Grid A, lines along x, line 3, y = 2.00 m"
+    used: set[str] = set()
+    names = [products._section_name(s.model_copy(update={"grid": grid}), 2, used) for grid in ("A", "a", "A 1")]
+    assert names == ["A_line-3", "a_line-3_2", "A-1_line-3"]
+
+
+def test_slices_in_large_leave_out_the_direct_wave_unless_nothing_else_is_left() -> None:
+    """It reaches to 0.16 m / 0.1 m/ns + 1 / 0.4 GHz = 4.1 ns after time zero."""
+    s = one_set("A/x", velocity=GOOD)
+    for windows, expected in (
+        (((4.0, 6.0), (4.2, 6.2)), [1]),
+        (((4.2, 6.0), (9.0, 9.2)), [0]),
+        (((1.0, 2.0), (2.0, 3.0)), [0]),
+    ):
+        run = run_of(s.model_copy(update={"windows_ns": windows}))
+        told = statements(run.plan, stack(), STRETCH)
+        # neighbours are never shown both: the first has the higher score
+        assert products._large(run.plan, told, [9.0, 5.0]) == expected
+
+
 # --- what a finished run holds ---
 
 
@@ -255,6 +303,7 @@ def test_lines_of_the_gis_file_link_their_sections(small: RunResult) -> None:
     assert sorted(lines["line"], key=int) == sorted(entries, key=int)
     for found in lines.itertuples():
         assert (small.out / found.section).is_file(), found.section
+        assert found.section == f"pictures/sections/A_line-{found.line}.png"
         coords = np.array(found.geometry.coords)[:, :2]
         np.testing.assert_allclose(coords, [entries[found.line].start, entries[found.line].end], atol=1e-9)
     assert lines["section"].is_unique
@@ -277,6 +326,18 @@ def test_every_product_states_the_same(small: RunResult) -> None:
         assert float(tags["PLANUM_DEPTH_ERROR_M"]) == pytest.approx(said["depth_error_m"], rel=5e-6)
         assert float(tags["PLANUM_VELOCITY_M_PER_NS"]) == pytest.approx(said["velocity_m_per_ns"], rel=5e-6)
         assert tags["PLANUM_PLAN_KEY"] == said["plan_key"]
+
+
+def test_every_picture_tells_about_itself(small: RunResult) -> None:
+    """Every PNG of a run carries the plan it was made by; sections their own line, all others every depth."""
+    record = json.loads((small.out / "run.json").read_text(encoding="utf-8"))
+    pictures = sorted((small.out / "pictures").rglob("*.png"))
+    assert len([p for p in pictures if p.parent.name == "sections"]) == 5
+    for path in pictures:
+        said = statement_in(path)
+        assert said["plan_key"] == record["statement"]["plan_key"], path.name
+        if path.parent.name == "sections":
+            assert said["quantity"].startswith("one line in section: Grid A, lines along x, line "), path.name
 
 
 def test_record_holds_what_a_repetition_needs(small: RunResult, scrap: Path) -> None:

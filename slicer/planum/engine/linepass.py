@@ -76,13 +76,22 @@ def run_row(pieces: Sequence[Piece], plan: SetPlan, row: int, *, section: bool =
     flag = cube["flag"].values[0]
     values = np.ascontiguousarray(means.isel(line=0).transpose("slice", "along").values, dtype=np.float32)
     values[:, (flag & FLAG_NONE) != 0] = np.nan
-    pictures = {name: _picture(stage.values[0]) for name, stage in stages.items()} if section else None
+    # the direct wave through the ground comes s / v after time zero's own; its pulse dies within a period and a half
+    direct_ns = plan.separation_m / plan.velocity.value + 1.5 / plan.centre_frequency_ghz
+    below = int(np.searchsorted(plan.geometry.times(), direct_ns))
+    pictures = {name: _picture(stage.values[0], below) for name, stage in stages.items()} if section else None
     return Strip(row=row, values=values, flag=flag, section=pictures)
 
 
-def _picture(amplitude: np.ndarray) -> np.ndarray:
-    """Grey values of a section: 128 is zero, positive dark, black and white at the 99th percentile."""
+def _picture(amplitude: np.ndarray, below: int) -> np.ndarray:
+    """Grey values of a section: 128 is zero, positive dark, black and white at a percentile of what was recorded.
+
+    The stretch is taken from sample ``below`` on: with the direct wave in it the raw ground would be plain grey.
+    """
     every = max(1, -(-amplitude.shape[0] // SECTION_TRACES))
     amplitude = amplitude[::every]
-    high = float(np.percentile(np.abs(amplitude[:, ::2]), 99.0)) or 1.0
+    recorded = amplitude[np.any(amplitude != 0.0, axis=1)]
+    ground = np.abs(recorded[:, below:] if below < amplitude.shape[1] else recorded)
+    high = float(np.percentile(ground, 98.0)) if ground.size else 0.0
+    high = high or float(np.abs(amplitude).max(initial=0.0)) or 1.0
     return np.clip(128.0 - 127.0 * amplitude / high, 0.0, 255.0).astype(np.uint8)

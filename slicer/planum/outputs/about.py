@@ -3,9 +3,10 @@
 from __future__ import annotations
 
 import json
+import math
 import sqlite3
 import warnings
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from contextlib import closing
 from html.parser import HTMLParser
 from pathlib import Path
@@ -57,7 +58,38 @@ def statement_in(path: Path) -> dict[str, str]:
         raise PlanumError(Problem(f"cannot be read: {error}", _allowed(), file=str(path))) from error
     if not found:
         raise PlanumError(Problem("carries no statement of planum", _allowed(), file=str(path)))
-    return {printable(k): printable(v, longest=4000) for k, v in found.items()}
+    return {printable(k): printable(v, longest=4000) for k, v in _rounded(found).items() if v}
+
+
+_ERRORS = {
+    "velocity_m_per_ns": "velocity_error_m_per_ns",
+    "velocity_error_m_per_ns": "velocity_error_m_per_ns",
+    "depth_error_m": "depth_error_m",
+    "zero_error_ns": "zero_error_ns",
+}
+"""Numbers, and the error that says how many of their digits mean something."""
+
+
+def _rounded(found: Mapping[str, str]) -> dict[str, str]:
+    """Round numbers to the second significant digit of their errors (common practice)."""
+    result = dict(found)
+    for name, error in _ERRORS.items():
+        if name in found and error in found:
+            values, errors = found[name].split(" | "), found[error].split(" | ")
+            errors = errors * len(values) if len(errors) == 1 else errors
+            texts = [_to(v, e) for v, e in zip(values, errors, strict=False)]
+            result[name] = texts[0] if len(set(texts)) == 1 else " | ".join(texts)
+    return result
+
+
+def _to(value: str, error: str) -> str:
+    try:
+        number, sigma = float(value), float(error)
+    except ValueError:
+        return value
+    if not 0.0 < sigma < math.inf:
+        return value
+    return f"{number:.{max(0, 1 - math.floor(math.log10(sigma)))}f}"
 
 
 def _allowed() -> str:

@@ -110,6 +110,8 @@ class SlicePainter:
         picture.paste(greys, (left, top), greys.point([255] * GREY_NODATA + [0] * (256 - GREY_NODATA)))
         label = slice_label(statement.top_m, statement.bottom_m)
         write_text(picture, (_LEFT * DPI, 0.14 * DPI), f"{label}  ± {statement.depth_error_m:.2f} m", 14, bold=True)
+        if statement.in_noise:
+            write_text(picture, (_LEFT * DPI, 0.38 * DPI), "in noise: only strong reflectors show", 8, fill=90)
         caption, cautions, _ = self._foot(statement)
         write_text(picture, (_LEFT * DPI, self._text_top), caption, _CAPTION)
         below = self._text_top + text_height(caption, _CAPTION) + 14
@@ -221,7 +223,7 @@ def draw_contact_sheet(
     name = str(slices.attrs.get("title") or slices.attrs["code"])
     first, last = statements[0], statements[-1]
     facts = (
-        f"{n} depth slices, {first.top_m:.2f} to {last.bottom_m:.2f} m below {first.surface}; {stretch.text};"
+        f"{n} depth slices, {first.top_m:.2f} to {last.bottom_m:.2f} m below {first.surface}; amplitude {stretch.text};"
         f" {'north is up' if raster.crs else 'y of the local frame is up'}; hatched: no data"
     )
     facts = wrapped(facts, width_px=across, points=8)
@@ -234,6 +236,8 @@ def draw_contact_sheet(
         left = edge + (index % columns) * (wide + gap)
         top = head + (index // columns) * (tall + label + gap)
         write_text(sheet, (left, top + 6), slice_label(statement.top_m, statement.bottom_m), 8)
+        if statement.in_noise and wide >= 190:
+            write_text(sheet, (left + wide, top + 8), "in noise", 6.5, anchor="ra", fill=90)
         sheet.paste(_thumbnail(grey(plane(slices, index), stretch), (wide, tall)), (left, top + label))
     write_text(sheet, (edge, size[1] - foot + 12), cautions, _CAUTIONS, fill=90)
     said = statement_text(joined([s.tags() for s in statements]))
@@ -244,8 +248,9 @@ def _thumbnail(greys: np.ndarray, size: tuple[int, int]) -> Image.Image:
     """Return greys (y, x) averaged to a size, hatched where nothing is known; such cells do not count."""
     pair = np.stack([greys, np.where(greys == GREY_NODATA, 0, 255).astype(np.uint8)], -1)
     small = Image.fromarray(pair, "LA").resize(size, Image.Resampling.BOX)
+    # tight and never quite white, or a missing line, a few pixels wide, would pass for weak ground
     paper = Image.fromarray(
-        np.where(np.add.outer(np.arange(size[1]), np.arange(size[0])) % 7 == 0, 205, 255).astype("u1")
+        np.where(np.add.outer(np.arange(size[1]), np.arange(size[0])) % 4 == 0, 150, 236).astype("u1")
     )
     paper.paste(small.getchannel("L"), (0, 0), small.getchannel("A"))
     ImageDraw.Draw(paper).rectangle((0, 0, size[0] - 1, size[1] - 1), outline=150)

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import base64
 import io
+import itertools
 from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path, PurePosixPath
@@ -100,7 +101,7 @@ def write_report(path: Path, context: ReportContext) -> None:
         lstrip_blocks=True,
         finalize=_plain,
     )
-    page = environment.get_template("report.html.j2").render(_values(context))
+    page = environment.get_template("report.html.j2").render(_values(context, path.parent))
     with aside(path) as part:
         part.write_text(page, encoding="utf-8", newline="\n")
 
@@ -110,7 +111,7 @@ def _plain(value: Any) -> Any:
     return value if isinstance(value, Markup) else printable(value, longest=_LONGEST_TEXT)
 
 
-def _values(context: ReportContext) -> dict[str, Any]:
+def _values(context: ReportContext, folder: Path) -> dict[str, Any]:
     statements = context.statements
     first = statements[0]
     errors = [s.depth_error_m for s in statements]
@@ -124,14 +125,17 @@ def _values(context: ReportContext) -> dict[str, Any]:
         "velocity": f"{first.velocity_m_per_ns:.4f} ± {first.velocity_error_m_per_ns:.4f} m/ns",
         "least": min(errors),
         "most": max(errors),
+        "grows": _grows(errors),
+        "losses": _losses(context),
+        "evidence": _evidence(context),
         "resolution": f"{first.resolution[:1].upper()}{first.resolution[1:]}.",
-        "contact": _embedded(context.contact),
-        "leading": [_embedded(p) for p in context.leading],
-        "best": [_embedded(p) for p in context.best],
-        "focus": _embedded(context.focus),
+        "contact": _embedded(context.contact, folder),
+        "leading": [_embedded(p, folder) for p in context.leading],
+        "best": [_embedded(p, folder) for p in context.best],
+        "focus": _embedded(context.focus, folder),
         "depth_rows": [(slice_label(s.top_m, s.bottom_m), f"± {s.depth_error_m:.3f} m") for s in statements],
-        "problem_rows": _problem_rows(context.problems),
-        "aside_rows": _problem_rows(context.set_aside),
+        **_problem_table("problem", "What came", context.problems),
+        **_problem_table("aside", "Why", context.set_aside),
         "sections": [(label, _link(href)) for label, href in context.sections],
         "files": [  # a pattern such as slices/<code>_*.tif is shown, not linked
             (_link(name) if "*" not in name and "<" not in name else "", name, what) for name, what in context.files
@@ -139,8 +143,39 @@ def _values(context: ReportContext) -> dict[str, Any]:
     }
 
 
-def _problem_rows(problems: Sequence[Problem]) -> list[tuple[str, str, str, str]]:
-    return [(p.where(), p.came, p.allowed, p.do) for p in problems]
+def _problem_table(name: str, came: str, problems: Sequence[Problem]) -> dict[str, Any]:
+    """Return columns and rows of a table of problems, without a column that none of them fills."""
+    columns = ("Where", came, "What is allowed", "What to do")
+    rows = [(p.where(), p.came, p.allowed, p.do) for p in problems]
+    kept = [i for i in range(len(columns)) if i < 2 or any(row[i] for row in rows)]
+    return {
+        f"{name}_columns": [columns[i] for i in kept],
+        f"{name}_rows": [[row[i] for i in kept] for row in rows],
+    }
+
+
+def _grows(errors: Sequence[float]) -> bool:
+    """Tell whether depth errors never fall downwards and end larger, as printed in hundredths."""
+    printed = [round(e, 2) for e in errors]
+    return printed[-1] > printed[0] and all(b >= a for a, b in itertools.pairwise(printed))
+
+
+def _losses(context: ReportContext) -> str:
+    """Return how many lines were set aside and are missing; no zeros."""
+    aside, missing = len(context.set_aside), len(context.missing)
+    parts = []
+    if aside:
+        parts.append(f"{aside} {'line was' if aside == 1 else 'lines were'} set aside")
+    if missing:
+        lines = "" if parts else "line " if missing == 1 else "lines "
+        parts.append(f"{missing} {lines}{'is' if missing == 1 else 'are'} missing")
+    return " and ".join(parts)
+
+
+def _evidence(context: ReportContext) -> str:
+    """Return what is known of the velocity, unless its origin has said the same already."""
+    said = context.statements[0].velocity_origin.casefold()
+    return "" if context.velocity.rstrip(".").casefold() in said else context.velocity
 
 
 def _link(relative: str) -> str:
@@ -154,8 +189,11 @@ def _link(relative: str) -> str:
     return quote(path.as_posix(), safe="/")
 
 
-def _embedded(picture: Picture | None) -> dict[str, Any] | None:
-    """Return a picture as a data URI with its size; wider ones than a screen needs are reduced."""
+def _embedded(picture: Picture | None, folder: Path) -> dict[str, Any] | None:
+    """Return a picture as a data URI with its size; wider ones than a screen needs are reduced.
+
+    One that lies in the run's folder has a link to itself, to be seen large.
+    """
     if picture is None:
         return None
     with Image.open(picture.path, formats=["PNG"]) as source:
@@ -168,4 +206,12 @@ def _embedded(picture: Picture | None) -> dict[str, Any] | None:
         packed = io.BytesIO()
         source.save(packed, format="PNG", compress_level=6)  # without text chunks: the page has its own statement
     uri = "data:image/png;base64," + base64.b64encode(packed.getvalue()).decode("ascii")
-    return {"uri": Markup(uri), "width": width, "height": height, "alt": picture.alt, "caption": picture.caption}  # noqa: S704
+    inside = picture.path.resolve().is_relative_to(folder.resolve())
+    return {
+        "uri": Markup(uri),  # noqa: S704
+        "href": _link(picture.path.resolve().relative_to(folder.resolve()).as_posix()) if inside else "",
+        "width": width,
+        "height": height,
+        "alt": picture.alt,
+        "caption": picture.caption,
+    }

@@ -14,7 +14,7 @@ from planum.outputs.paper import DPI, round_step, text_height, wrapped, write_te
 from planum.outputs.writing import save_png
 from planum.records import Velocity
 
-__all__ = ["DepthScale", "draw_section", "section_greys"]
+__all__ = ["DepthScale", "SectionText", "draw_section", "section_greys"]
 
 # Drawn straight into the picture: a survey has a section per line, and axes objects would take most of the time.
 _LEFT, _RIGHT, _TOP, _GAP, _AXIS = 64, 88, 76, 40, 46  # pixels: margins, between panels, below the last one
@@ -32,6 +32,15 @@ class DepthScale:
     intervals: Sequence[tuple[float, float]] = ()
 
 
+@dataclass(frozen=True)
+class SectionText:
+    """What names the line, the survey and visit below it, and the sentence below the panels."""
+
+    title: str
+    heading: str = ""
+    statement: str = ""
+
+
 def draw_section(
     path: Path,
     panels: Mapping[str, np.ndarray],
@@ -39,8 +48,8 @@ def draw_section(
     times: np.ndarray,
     scale: DepthScale,
     *,
-    title: str,
-    statement: str = "",
+    text: SectionText,
+    recorded: np.ndarray | None = None,
 ) -> None:
     """Draw the panels of one line below each other and write a PNG.
 
@@ -55,8 +64,10 @@ def draw_section(
         Two-way time from time zero of the rows, ns, ascending (only its ends are used).
     scale
         Depths at the right and the slices marked there.
-    title
-        Names the line; the statement's sentence goes below the panels.
+    text
+        Above and below the panels.
+    recorded
+        (n_along of the unthinned line) bool: columns without a recording are hatched as unknown ground is in slices.
 
     Raises
     ------
@@ -66,24 +77,29 @@ def draw_section(
     if not panels:
         raise ValueError("a section needs at least one panel")
     span, window = _edges(along, "along"), _edges(times, "times")
-    foot = wrapped(statement, width_px=_WIDE, points=_FOOT) if statement else ""
+    foot = wrapped(text.statement, width_px=_WIDE, points=_FOOT) if text.statement else ""
     below = _TOP + len(panels) * (_TALL + _GAP) - _GAP + _AXIS
     height = below + (round(text_height(foot, _FOOT)) + 24 if foot else 8)
     picture = Image.new("L", (_LEFT + _WIDE + _RIGHT, height), 255)
+    if recorded is not None:
+        hatching, gaps = _hatching(), _gaps(recorded)
     for index, (name, values) in enumerate(panels.items()):
         top = _TOP + index * (_TALL + _GAP)
         greys = Image.fromarray(np.ascontiguousarray(section_greys(values).T))
         method = Image.Resampling.BOX if greys.width > _WIDE else Image.Resampling.BILINEAR
         picture.paste(greys.resize((_WIDE, _TALL), method), (_LEFT, top))
+        if recorded is not None:
+            picture.paste(hatching, (_LEFT, top), gaps)
         ImageDraw.Draw(picture).rectangle((_LEFT - 1, top - 1, _LEFT + _WIDE, top + _TALL), outline=_INK)
         write_text(picture, (_LEFT, top - 19), name, 8, bold=True)
         _draw_distance(picture, top + _TALL, span, labels=index == len(panels) - 1)
         _draw_times(picture, top, window)
         _draw_depths(picture, top, window, scale)
-    write_text(picture, (_LEFT, 16), title, 12, bold=True)
+    write_text(picture, (_LEFT, 12), text.title, 12, bold=True)
+    write_text(picture, (_LEFT, 36), text.heading, 7.5, fill=_SOFT)
     if foot:
         write_text(picture, (_LEFT, below + 6), foot, _FOOT, fill=_SOFT)
-    save_png(path, picture, title=title, sentence=statement, dpi=DPI)
+    save_png(path, picture, title=text.title, sentence=text.statement, dpi=DPI)
 
 
 def section_greys(values: np.ndarray, *, percentile: float = 98.0) -> np.ndarray:
@@ -102,6 +118,18 @@ def section_greys(values: np.ndarray, *, percentile: float = 98.0) -> np.ndarray
     values = np.nan_to_num(np.asarray(values, np.float32))
     full = float(np.percentile(np.abs(values), percentile)) or float(np.abs(values).max(initial=0.0)) or 1.0
     return np.rint(127.5 - 127.0 * np.clip(values / full, -1.0, 1.0)).astype(np.uint8)
+
+
+def _hatching() -> Image.Image:
+    lines = np.add.outer(np.arange(_TALL), np.arange(_WIDE)) % 7 == 0
+    return Image.fromarray(np.where(lines, 205, 255).astype(np.uint8))
+
+
+def _gaps(recorded: np.ndarray) -> Image.Image:
+    """Return the mask of the picture's columns whose nearest trace was not recorded."""
+    nearest = np.floor((np.arange(_WIDE) + 0.5) / _WIDE * recorded.size).astype(int)
+    row = np.where(recorded[nearest], 0, 255).astype(np.uint8)
+    return Image.fromarray(np.ascontiguousarray(np.broadcast_to(row, (_TALL, _WIDE))))
 
 
 def _edges(axis: np.ndarray, name: str) -> tuple[float, float]:

@@ -37,7 +37,7 @@ def write_stack(path: Path, slices: xr.Dataset, statements: Sequence[Statement])
     check_statements(slices, statements)
     raster = raster_of(slices)
     texts = [statement.tags() for statement in statements]
-    common = {k: v for k, v in texts[0].items() if all(t[k] == v for t in texts)}
+    common = {k: v for k, v in texts[0].items() if all(t.get(k) == v for t in texts)}
     profile = {
         "driver": "GTiff",
         "width": raster.width,

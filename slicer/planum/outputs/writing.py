@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import json
 import os
+import struct
+import zlib
 from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from pathlib import Path
@@ -14,7 +16,7 @@ from PIL.PngImagePlugin import PngInfo
 from planum.errors import MachineError, Problem
 from planum.records import Statement
 
-__all__ = ["PNG_KEY", "aside", "joined", "save_png", "statement_text"]
+__all__ = ["PNG_KEY", "aside", "copy_png", "joined", "save_png", "statement_text"]
 
 PNG_KEY = "planum-statement"
 """Keyword of the PNG text chunk, and name of the HTML meta element, that hold the statement as JSON."""
@@ -84,3 +86,18 @@ def save_png(
         chunks.add_itxt(PNG_KEY, statement)
     with aside(path) as part:
         picture.save(part, format="PNG", pnginfo=chunks, dpi=(dpi, dpi), compress_level=4)
+
+
+def copy_png(source: Path, path: Path, *, statement: str) -> None:
+    """Copy a picture with a statement put in as a text chunk, its pixels untouched.
+
+    The chunk is an uncompressed ``iTXt`` after the header (PNG specification, sections 5.3 and 11.3.3.4).
+    """
+    content = source.read_bytes()
+    after = 8 + 25  # signature; IHDR is always first, with 13 bytes of data
+    if content[:8] != b"\x89PNG\r\n\x1a\n" or content[12:16] != b"IHDR":
+        raise MachineError(Problem("is no PNG", do="remove the survey's work folder and map again", file=str(source)))
+    body = b"iTXt" + PNG_KEY.encode("ascii") + b"\0\0\0\0\0" + statement.encode("utf-8")
+    chunk = struct.pack(">I", len(body) - 4) + body + struct.pack(">I", zlib.crc32(body))
+    with aside(path) as part:
+        part.write_bytes(content[:after] + chunk + content[after:])

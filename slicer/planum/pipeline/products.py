@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import json
-import shutil
 from collections.abc import Callable, Mapping, Sequence
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import replace
@@ -23,13 +22,13 @@ from planum.outputs.netcdf import write_netcdf
 from planum.outputs.pictures import draw_contact_sheet, draw_slices
 from planum.outputs.raster import plane, raster_of
 from planum.outputs.report import write_report
-from planum.outputs.section import DepthScale, draw_section
+from planum.outputs.section import DepthScale, SectionText, draw_section
 from planum.outputs.stack import write_stack
 from planum.outputs.stretch import stretch_of
-from planum.outputs.writing import aside
+from planum.outputs.writing import aside, copy_png, joined, statement_text
 from planum.pipeline.telling import Drawn, report_context
 from planum.pipeline.told import PRODUCTS_VERSION, RunFacts, statements, versions
-from planum.records import Facts, Plan, SetPlan, Statement, Strip, canon, key
+from planum.records import FLAG_NONE, Facts, Plan, SetPlan, Statement, Strip, canon, key
 from planum.scene.picture import render_safely
 from planum.slices.structure import best_slices, structure
 from planum.survey.control import ControlPoint
@@ -47,18 +46,33 @@ def section_key(plan: Plan, s: SetPlan, row: int, row_name: str) -> str:
 
 def section_picture(path: Path, plan: Plan, s: SetPlan, strip: Strip) -> None:
     """Draw one row's section: raw, processed, migrated, with a depth axis and the slices' intervals."""
-    across = "y" if s.geometry.direction == "x" else "x"
-    names = ", ".join(dict.fromkeys(e.line for e in s.entries if e.row == strip.row))
     v = s.velocity
+    recorded = (strip.flag & FLAG_NONE) == 0
     draw_section(
         path,
         strip.section or {},
         s.geometry.along(),
         s.geometry.times(),
         DepthScale(v, s.separation_m, plan.intervals_m),
-        title=f"Set {s.name}, line {names}, {across} = {s.geometry.lines()[strip.row]:.2f} m",
-        statement=f"Depth below the ground surface as walked at {v.value:.4f} ± {v.error:.4f} m/ns ({v.origin}); "
-        f"time zero ± {s.zero.error:.2f} ns; each panel has its own stretch, positive = dark. {CAUTIONS[0]}",
+        text=SectionText(
+            row_title(s, strip.row),
+            ", ".join(filter(None, [plan.title, f"visit {s.visit}" if s.visit else ""])),
+            f"Depth below the ground surface as walked at {v.value:.4f} ± {v.error:.4f} m/ns ({v.origin}); time zero"
+            f" ± {s.zero.error:.2f} ns; each panel has its own stretch below the direct wave, positive = dark;"
+            f" hatched: no recording. {CAUTIONS[0]}",
+        ),
+        recorded=recorded if recorded.any() else None,
+    )
+
+
+def row_title(s: SetPlan, row: int) -> str:
+    """Return what a row is called: its grid, the way its lines run, its line and its place across."""
+    across = "y" if s.geometry.direction == "x" else "x"
+    lines = list(dict.fromkeys(e.line for e in s.entries if e.row == row))
+    word = "line" if len(lines) == 1 else "lines"
+    return (
+        f"Grid {s.grid}, lines along {s.geometry.direction}, {word} {', '.join(lines)},"
+        f" {across} = {s.geometry.lines()[row]:.2f} m"
     )
 
 
@@ -145,7 +159,8 @@ def write_products(
         return lambda done, total: progress(stage, done, total) if progress else None
 
     pictures = folder / "pictures"
-    linked = _copy_sections(pictures, plan, sections)
+    whole = joined([one.tags() for one in told])
+    linked = _copy_sections(pictures, plan, sections, whole)
     site = shapes(run, stack, linked)
     write_netcdf(
         folder / "slices.nc", stack, told, history=f"planum {plan.version}, plan {key(plan)}", attrs={"code": plan.code}
@@ -161,7 +176,12 @@ def write_products(
         draw_contact_sheet(named["contact"], stack, told, stretch)
         if run.curve:
             named["focus"] = pictures / "velocity-focus.png"
-            draw_focus(named["focus"], run.curve, plan.sets[0].velocity)
+            draw_focus(
+                named["focus"],
+                run.curve,
+                plan.sets[0].velocity,
+                statement=statement_text(whole | _set_tags(plan.sets[0])),
+            )
         step("drawing the isosurface")(0, 1)
         problem = scene.result()
         step("drawing the isosurface")(1, 1)
@@ -172,7 +192,7 @@ def write_products(
     shown = Drawn(
         named,
         drawn,
-        best_slices(_scores(stack, told[0].line_spacing_m)),
+        _large(plan, told, _scores(stack, told[0].line_spacing_m)),
         {label: name for (label, _), name in linked.items()},
     )
     context = report_context(run, told, shown, folder)
@@ -192,22 +212,70 @@ def _scores(stack: xr.Dataset, line_spacing_m: float) -> list[float]:
     return [structure(plane(stack, i), spacing=spacing) for i in range(stack.sizes["depth"])]
 
 
-def _copy_sections(pictures: Path, plan: Plan, sections: Mapping[tuple[str, int], Path]) -> dict[tuple[str, str], str]:
+def _large(plan: Plan, told: Sequence[Statement], scores: Sequence[float]) -> list[int]:
+    """Return the slices shown in large: those with most structure, without what the direct wave still colours."""
+    clear = [
+        i
+        for i in range(len(told))
+        if all(
+            s.windows_ns[i][0] >= s.separation_m / s.velocity.value + 1.0 / s.centre_frequency_ghz for s in plan.sets
+        )
+    ]
+    if not clear:
+        return best_slices(scores)
+    return [clear[i] for i in best_slices([scores[i] for i in clear])]
+
+
+def _set_tags(s: SetPlan) -> dict[str, str]:
+    """Return those tags of a statement in which one set may differ from the whole stack."""
+    v = s.velocity
+    said = {
+        "velocity_m_per_ns": f"{v.value:.6g}",
+        "velocity_error_m_per_ns": f"{v.error:.6g}",
+        "velocity_origin": f"{v.origin}: {v.method}" if v.method else v.origin,
+        "zero_rule": s.zero.method,
+        "zero_error_ns": f"{s.zero.error:.6g}",
+        "date": s.visit or "not stated",
+    }
+    return {f"PLANUM_{name.upper()}": text for name, text in said.items()}
+
+
+_STACK_ONLY = ("STATISTIC", "FILL", "COVERAGE_RULE", "RESOLUTION", "STRETCH")
+
+
+def _copy_sections(
+    pictures: Path, plan: Plan, sections: Mapping[tuple[str, int], Path], whole: Mapping[str, str]
+) -> dict[tuple[str, str], str]:
     """Copy one section picture per row; return (label, entry's set and row) to the path within the run folder."""
     linked = {}
+    used: set[str] = set()
     for s in plan.sets:
-        across = "y" if s.geometry.direction == "x" else "x"
-        for row, place in enumerate(s.geometry.lines()):
+        about = {k: v for k, v in whole.items() if k.removeprefix("PLANUM_") not in _STACK_ONLY} | _set_tags(s)
+        for row in range(s.geometry.n_lines):
             path = sections.get((s.name, row))
             if path is None:
                 continue
-            lines = ", ".join(dict.fromkeys(e.line for e in s.entries if e.row == row))
-            stem = "".join(c if c.isalnum() or c in "-_" else "-" for c in f"{s.name}_{row:03d}_{lines}")
-            (pictures / "sections").mkdir(parents=True, exist_ok=True)
-            shutil.copyfile(path, pictures / "sections" / f"{stem}.png")
-            label = f"{s.name}, line {lines}, {across} = {place:.2f} m"
-            linked[label, f"{s.name}/{row}"] = f"pictures/sections/{stem}.png"
+            title = row_title(s, row)
+            stem = _section_name(s, row, used)
+            said = about | {
+                "PLANUM_QUANTITY": f"one line in section: {title}; raw, processed and, where it is, migrated"
+            }
+            copy_png(path, pictures / "sections" / f"{stem}.png", statement=statement_text(said))
+            linked[title, f"{s.name}/{row}"] = f"pictures/sections/{stem}.png"
     return linked
+
+
+def _section_name(s: SetPlan, row: int, used: set[str]) -> str:
+    """Return a file name for a row, another one than all before whatever case a disk heeds."""
+    grids = s.name if s.name.count("/") > 1 else s.grid
+    lines = "-".join(dict.fromkeys(e.line for e in s.entries if e.row == row))
+    plain = "".join(c if c.isalnum() or c in "-_" else "-" for c in f"{grids}_line-{lines}")
+    stem, number = plain, 1
+    while stem.casefold() in used:
+        number += 1
+        stem = f"{plain}_{number}"
+    used.add(stem.casefold())
+    return stem
 
 
 def _write_record(folder: Path, run: RunFacts, told: Sequence[Statement], token: str) -> None:

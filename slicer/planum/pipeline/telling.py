@@ -8,7 +8,7 @@ from pathlib import Path
 
 from planum.outputs.report import Picture, ReportContext, ReportTable
 from planum.pipeline.recipe import settings_text
-from planum.pipeline.told import RunFacts, versions
+from planum.pipeline.told import RunFacts, noise_depth, versions
 from planum.records import Plan, Statement
 
 __all__ = ["FILES", "Drawn", "report_context"]
@@ -20,7 +20,7 @@ FILES = (
     ("slices.nc", "all slices with depth bounds, depth error, leave-one-line-out error and coverage (NetCDF, CF-1.11)"),
     ("site.gpkg", "lines, grids, control points with residuals, coverage (GeoPackage)"),
     ("pictures/", "every slice, the contact sheet, the isosurface, one section per line"),
-    ("run.json", "every number of this run; `planum map SITE --plan run.json` repeats it"),
+    ("run.json", "every number of this run; the command planum map SITE --plan run.json repeats it"),
 )
 
 
@@ -48,8 +48,9 @@ def report_context(run: RunFacts, statements: Sequence[Statement], drawn: Drawn,
         ("Raster", summary["raster"]),
         *(("Ground", text) for text in run.visits.values() if text),
     ]
-    if first.limit_depth_m:
-        surveyed.append(("Ground meets noise", f"{first.limit_depth_m:.2f} m; below it only strong reflectors show"))
+    limit = noise_depth(plan)
+    if limit is not None:
+        surveyed.append(("Ground meets noise", f"{limit:.2f} m; below it only strong reflectors show"))
     leading, focus = [], None
     if "isosurface" in named:
         alt, caption = (
@@ -69,7 +70,11 @@ def report_context(run: RunFacts, statements: Sequence[Statement], drawn: Drawn,
         contact=Picture(named["contact"], "All depth slices, shallow to deep"),
         leading=tuple(leading),
         best=tuple(
-            Picture(drawn.slices[i], f"Slice {statements[i].top_m:.2f} to {statements[i].bottom_m:.2f} m")
+            Picture(
+                drawn.slices[i],
+                f"Slice {statements[i].top_m:.2f} to {statements[i].bottom_m:.2f} m",
+                _slice_caption(statements[i]),
+            )
             for i in drawn.large
         ),
         focus=focus,
@@ -83,6 +88,12 @@ def report_context(run: RunFacts, statements: Sequence[Statement], drawn: Drawn,
         versions=tuple(versions().items()),
         hashes=tuple((name, f.file_id) for name, f in run.facts.items()),
     )
+
+
+def _slice_caption(s: Statement) -> str:
+    """Return interval, error and date of a slice: a phone shows the picture's own letters too small."""
+    noise = f" {s.noise[:1].upper()}{s.noise[1:]}." if s.in_noise else ""
+    return f"{s.top_m:.2f} to {s.bottom_m:.2f} m, ± {s.depth_error_m:.2f} m, visit {s.date}.{noise}"
 
 
 def _files(plan: Plan, folder: Path) -> list[tuple[str, str]]:

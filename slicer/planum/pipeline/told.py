@@ -17,13 +17,20 @@ from planum.outputs.stretch import Stretch
 from planum.records import Facts, Plan, Statement, key, migration_velocity
 from planum.survey.control import ControlPoint
 
-__all__ = ["PRODUCTS_VERSION", "RunFacts", "statements", "versions"]
+__all__ = ["PRODUCTS_VERSION", "RunFacts", "noise_depth", "statements", "versions"]
 
-PRODUCTS_VERSION = 1
+PRODUCTS_VERSION = 2
 """Raised when wording, pictures or formats change, so that an unchanged survey is written anew."""
 
-FILL = f"filled between lines by a band-limited kernel held to the neighbouring lines' range within {LIMIT_MARGIN:.0%}"
-COVERAGE_RULE = f"empty beyond {MASK_BETWEEN:g} line spacing from a trace, {MASK_OUTSIDE:g} outside the outer lines"
+FILL = (
+    "between lines: smooth curve through the lines, never outside the neighbouring lines' values by more than"
+    f" {100 * LIMIT_MARGIN:g} % of their range"
+)
+COVERAGE_RULE = (
+    f"empty farther than {MASK_BETWEEN:g} line spacings from a trace, {MASK_OUTSIDE:g} outside the outer lines"
+)
+NOISE_STEP_M = 0.05
+"""The depth at which ground sinks into noise is told to this step: its median over lines bears no more."""
 
 
 @dataclass(frozen=True)
@@ -74,7 +81,7 @@ class RunFacts:
             "velocity": f"{first.velocity.value:.4f} ± {first.velocity.error:.4f} m/ns ({first.velocity.origin})",
             "time_zero": str(first.zero),
             "missing": self.missing(),
-            "limit_depth_m": first.limit_depth_m,
+            "limit_depth_m": noise_depth(plan),
             "notes": list(plan.notes),
         }
 
@@ -88,7 +95,7 @@ def statements(plan: Plan, stack: xr.Dataset, stretch: Stretch) -> tuple[Stateme
     name = key(plan)
     return tuple(
         Statement(
-            quantity="mean envelope amplitude in the recorder's units",
+            quantity="envelope (strength of the echo) in the recorder's units",
             top_m=top,
             bottom_m=bottom,
             statistic=plan.statistic,
@@ -111,9 +118,24 @@ def statements(plan: Plan, stack: xr.Dataset, stretch: Stretch) -> tuple[Stateme
             survey=plan.title,
             plan_key=name,
             version=plan.version,
+            noise=_noise(noise_depth(plan), (top + bottom) / 2.0),
         )
         for (top, bottom), error in zip(plan.intervals_m, stack["depth_error"].values, strict=True)
     )
+
+
+def noise_depth(plan: Plan) -> float | None:
+    """Return the depth (m) at which ground sinks into noise, the shallowest of the sets; None when none gets there."""
+    reached = [s.limit_depth_m for s in plan.sets if s.limit_depth_m is not None]
+    return round(round(min(reached) / NOISE_STEP_M) * NOISE_STEP_M, 2) if reached else None
+
+
+def _noise(limit_m: float | None, middle_m: float) -> str:
+    if limit_m is None:
+        return "ground stands above noise to the end of the record"
+    if middle_m > limit_m + 1e-9:
+        return f"below the depth where ground sinks into noise ({limit_m:.2f} m): only strong reflectors show"
+    return f"above the depth where ground sinks into noise ({limit_m:.2f} m)"
 
 
 def versions() -> dict[str, str]:

@@ -59,9 +59,11 @@ def statements_of(slices: xr.Dataset) -> tuple[Statement, ...]:
     """Return the statements a slice file carries, one per depth; empty when it carries none that are whole."""
     count = slices.sizes["depth"]
     columns: dict[str, list[object]] = {}
-    for name in Statement.model_fields:
+    for name, field in Statement.model_fields.items():
         value = slices.attrs.get(STATEMENT_PREFIX + name)
         if name == "cautions":  # stored as prose; the record's own are the same for every slice
+            continue
+        if value is None and not field.is_required():  # an older run did not state it
             continue
         if value is None:
             return ()
