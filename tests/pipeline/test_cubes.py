@@ -90,10 +90,10 @@ def test_kept_flags_are_those_of_the_row_itself(site: Path, tmp_path: Path, stag
     """At every stage, with and without a cache, flags and places are what the steps give by hand."""
     plan = read_run(site / "out" / "run.json")[0].sets[0]
     until = 0 if stage == "raw" else [s.name for s in plan.chain].index(stage) + 1
+    rows = [condition(row_cube(read_pieces(site, plan, row), plan, row), plan.chain[:until]) for row in range(5)]
     for where in (site, without_work(site, tmp_path)):
-        cube = open_cube(where, "A/x", stage=stage)
-        for row in range(5):
-            by_hand = condition(row_cube(read_pieces(site, plan, row), plan, row), plan.chain[:until])
+        cube = open_cube(where, "A/x", stage=stage).compute()
+        for row, by_hand in enumerate(rows):
             for name in ("flag", "x", "y"):
                 np.testing.assert_array_equal(cube[name].values[row], by_hand[name].values[0], err_msg=f"{name} {row}")
 

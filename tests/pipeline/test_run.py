@@ -20,11 +20,12 @@ import rasterio
 import xarray as xr
 
 from planum.errors import PlanumError, Problem, RecipeError, SurveyError
+from planum.lines.reading import read_line
+from planum.lines.recording import ReadOptions
+from planum.lines.segy_write import write_segy
 from planum.pipeline import census, passes, products
 from planum.pipeline.cubes import open_cube
 from planum.pipeline.run import RunResult, map_site, plan_site, read_run
-from planum.synthetic.folder import write_survey
-from planum.synthetic.ready import one_page
 
 
 def copied(page: Path, tmp_path: Path) -> Path:
@@ -320,8 +321,9 @@ map_site(Path({site!r}))
 def test_killed_at_twenty_moments_the_run_is_whole(scrap: Path, tmp_path: Path, no_isosurface: None) -> None:
     """SIGKILL at 20 random moments of a run that replaces another: always the old folder or the new, whole.
 
-    The seed fixes the moments as shares of one measured run, the first one, which is let through; each try changes the
-    title, so that all products are written anew, and every other empties work/, so that the passes are hit too.
+    The seed fixes the moments as shares of the last run of the same kind that came to its end. Each try changes the
+    title, so that all products are written anew; one kind also empties work/, so that the passes are hit too. Tries go
+    on until 20 were killed: a run that ends before its moment proves nothing.
     """
     site = copied(scrap, tmp_path)
     map_site(site)
@@ -331,24 +333,32 @@ def test_killed_at_twenty_moments_the_run_is_whole(scrap: Path, tmp_path: Path, 
     clean = multiprocessing.get_context("forkserver" if hasattr(os, "fork") else "spawn")
     if hasattr(os, "fork"):
         clean.set_forkserver_preload(["planum.pipeline.run"])
-        clean.Process(target=exec, args=("pass",)).start()
-    took, killed = 600.0, 0
-    for attempt in range(21):
+        first = clean.Process(target=exec, args=("pass",))
+        first.start()
+        first.join()
+    took = {True: 600.0, False: 600.0}
+    killed: list[bool] = []
+    for attempt in range(60):
+        if len(killed) == 20:
+            break
+        from_nothing = attempt % 2 == 0
         (site / "survey.toml").write_text(text.replace("Invented survey", f"Title {attempt}"), encoding="utf-8")
-        if attempt % 2 == 0:
+        if from_nothing:
             shutil.rmtree(site / "work")
-        process = clean.Process(target=exec, args=(KILLED.format(site=str(site)),))
+        process = clean.Process(target=exec, args=(KILLED.format(site=str(site)), {}))
         start = time.monotonic()
         process.start()
-        process.join(took if attempt == 0 else took * rng.uniform(0.02, 1.0))
+        process.join(took[from_nothing] * (1.0 if attempt < 2 else rng.uniform(0.02, 1.0)))
         if process.is_alive():
             process.kill()
-            killed += 1
-        process.join()
-        if attempt == 0:
-            took = time.monotonic() - start
+            killed.append(from_nothing)
+            process.join()
+        else:
+            assert process.exitcode == 0
+            took[from_nothing] = time.monotonic() - start
         assert is_whole(site / "out"), attempt
-    assert killed >= 5  # a run of products alone is shorter than the measured one: some end before their moment
+    assert len(killed) == 20
+    assert 5 <= sum(killed) <= 15  # both kinds were hit
     final = map_site(site)
     assert is_whole(final.out)
     assert list(site.glob(".out*")) == []
@@ -361,26 +371,61 @@ from planum.errors import Problem
 from planum.pipeline import products
 from planum.pipeline.run import map_site
 products.draw_scene = lambda *_: Problem(came="left out")
-map_site(Path(sys.argv[1]))
-print(resource.getrusage(resource.RUSAGE_SELF).ru_maxrss)
+before = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss
+map_site(Path(sys.argv[1]), workers=2)
+print(resource.getrusage(resource.RUSAGE_SELF).ru_maxrss - before)
+"""
+
+LONG = """
+[survey]
+title = "Many long lines"
+code = "LONG"
+[[radar]]
+centre_frequency_mhz = 400
+antenna_separation_m = 0.16
+interval_unit = "ps"
+[[grid]]
+name = "A"
+files = "lines/{{line}}.sgy"
+line_count = {count}
+line_spacing_m = 0.25
+line_length_m = 100.0
+cell_m = 0.25
+[ground]
+velocity_m_per_ns = 0.0875
+[slices]
+top_m = 0.4
+bottom_m = 0.7
+step_m = 0.1
 """
 
 
-@pytest.mark.skipif(os.name == "nt", reason="peak memory is read from the POSIX resource module")
-def test_memory_does_not_grow_with_lines(tmp_path: Path) -> None:
-    """Four times the lines raise the peak memory of the whole process by less than a tenth."""
-    from dataclasses import replace
+def long_lines(site: Path, one: np.ndarray, count: int) -> None:
+    """Write lines of 2000 traces x 512 samples, 2 MB each: one short line over and over, never twice the same."""
+    (site / "lines").mkdir(parents=True)
+    (site / "survey.toml").write_text(LONG.format(count=count), encoding="utf-8")
+    rng = np.random.default_rng(1)
+    for number in range(1, count + 1):
+        data = rng.integers(-3, 4, (2000, 512)).astype(np.int16)
+        data[:, : one.shape[1]] += np.roll(np.resize(one, (2000, one.shape[1])), 7 * number, axis=0)
+        write_segy(site / "lines" / f"{number}.sgy", data, interval_ns=0.3)
 
+
+@pytest.mark.skipif(os.name == "nt", reason="peak memory is read from the POSIX resource module")
+def test_memory_does_not_grow_with_lines(scrap: Path, tmp_path: Path) -> None:
+    """Four times the lines hardly raise the peak memory of a run, counted above what the loaded libraries take.
+
+    Measured: 12 lines 139 MB, 48 lines 162 MB; what grows are facts and plan, 0.6 MB a line. Keeping every raw line as it
+    is in the file made it 172 and 306 MB, as float64 320 and 927 MB: factors of 1.8 and 2.9 instead of 1.2.
+    """
+    one = read_line(min((scrap / "lines").glob("*.sgy")), ReadOptions(interval_unit="ps")).data
     peak = []
-    scene, layout = one_page()
-    for n in (20, 80):
-        site = tmp_path / f"lines-{n}"
-        write_survey(site, scene, replace(layout, width_m=0.25 * (n - 1)), seed=2)
-        with (site / "survey.toml").open("a", encoding="utf-8") as file:
-            file.write("\n[slices]\nbottom_m = 1.2\nstep_m = 0.1\n[ground]\nvelocity_m_per_ns = 0.0875\n")
+    for count in (12, 48):
+        site = tmp_path / f"lines-{count}"
+        long_lines(site, one, count)
         done = subprocess.run([sys.executable, "-c", MEASURED, str(site)], capture_output=True, text=True, check=True)
         peak.append(int(done.stdout.split()[-1]))
-    assert peak[1] < 1.1 * peak[0], peak
+    assert peak[1] < 1.4 * peak[0], peak
 
 
 def test_problem_of_a_line_names_the_line(scrap: Path, tmp_path: Path, no_isosurface: None) -> None:
