@@ -18,7 +18,7 @@ from typing import Any
 
 import planum
 from planum.engine.steps import check_order, get_step
-from planum.errors import LineError, Problem, SurveyError, printable
+from planum.errors import LineError, Problem, SurveyError
 from planum.lines.recording import RawLayout, ReadOptions
 from planum.pipeline import exchange
 from planum.pipeline.census import Source, census, in_order
@@ -27,6 +27,7 @@ from planum.pipeline.gridded import grid_stack, open_stack
 from planum.pipeline.passes import row_key, strip_of
 from planum.pipeline.products import section_key, section_picture, write_products
 from planum.pipeline.recipe import toml
+from planum.pipeline.repeat import differences, no_plan, of_this_site
 from planum.pipeline.resolve import Resolution, check_cells, resolve
 from planum.pipeline.store import Store
 from planum.pipeline.told import RunFacts
@@ -99,11 +100,13 @@ def map_site(
 def _run(
     survey: Survey, final: Path, store: Store, executor: Executor, plan_file: Path | None, progress: Progress | None
 ) -> RunResult:
+    asked = None if plan_file is None else of_this_site(read_run(plan_file)[0], survey.config, plan_file)
     lines, aside = _facts(survey, store, executor, progress)
-    if plan_file is None:
+    if asked is None or plan_file is None:
         resolution = resolve(survey, lines, store=store, executor=executor, set_aside=aside, progress=progress)
     else:
-        resolution = Resolution(_same_bytes(read_run(plan_file)[0], lines, plan_file), (), tuple(aside))
+        told = differences(asked, survey.config)
+        resolution = Resolution(_same_bytes(asked, lines, plan_file), told, tuple(aside))
     plan, aside = resolution.plan, list(resolution.set_aside)
     warnings = (*survey.warnings, *_noticed(lines), *resolution.warnings)
     run = RunFacts(
@@ -195,14 +198,7 @@ def read_run(path: Path) -> tuple[Plan, dict[str, Any]]:
         check_cells(plan.bounds, plan.cell_m)
         return plan, record
     except (OSError, ValueError, KeyError, TypeError) as fault:
-        raise SurveyError(
-            Problem(
-                came=f"no plan can be read ({printable(str(fault).partition(chr(10))[0], longest=120)})",
-                allowed="the run.json of a run",
-                do="planum map SITE makes one",
-                file=str(path),
-            )
-        ) from fault
+        raise no_plan(path, fault) from fault
 
 
 def recipe_text(site: Path, *, progress: Progress | None = None) -> str:
