@@ -415,8 +415,8 @@ def long_lines(site: Path, one: np.ndarray, count: int) -> None:
 def test_memory_does_not_grow_with_lines(scrap: Path, tmp_path: Path) -> None:
     """Four times the lines hardly raise the peak memory of a run, counted above what the loaded libraries take.
 
-    Measured: 12 lines 139 MB, 48 lines 162 MB; what grows are facts and plan, 0.6 MB a line. Keeping every raw line as it
-    is in the file made it 172 and 306 MB, as float64 320 and 927 MB: factors of 1.8 and 2.9 instead of 1.2.
+    Measured: 12 lines 139 MB, 48 lines 162 MB; what grows are facts and plan, 0.6 MB a line. Keeping every raw line as
+    it is in the file made it 172 and 306 MB, as float64 320 and 927 MB: factors of 1.8 and 2.9 instead of 1.2.
     """
     one = read_line(min((scrap / "lines").glob("*.sgy")), ReadOptions(interval_unit="ps")).data
     peak = []
