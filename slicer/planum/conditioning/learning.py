@@ -29,11 +29,11 @@ LINES_TO_TELL = 15
 """With fewer lines a wall along them, and its flanks on the lines beside, is too large a share for a median to ignore:
 3 of 15 are a fifth."""
 
-_EARLY, _LATE = 0.5, 0.25
-_FLAT, _FLAT_DB = 0.2, 1.0
-"""The last quarter of a record is flat when its level falls by less than a fifth of what spreading and the decay of the
-first half would make of it, or by less than 1 dB: then it is noise. Still falling, it is ground in noise or ground
-alone, and the noise was not recorded. Level and fall of ground at the noise's level: 3 dB above it, half the fall."""
+_LATE, _LATE_PERIODS = 0.125, 2.0
+_FLAT, _FLAT_DB = 0.15, 0.7
+"""The last eighth of a record, two periods at least, is flat when its level falls by less than 15 % of what the fall
+before would make of it, or by less than 0.7 dB: then it is noise. Spreading alone, without any loss, makes 1.1 dB
+(20 log10 of 8/7). Still falling, it is ground in noise or ground alone, and the level of noise was not recorded."""
 
 _ONE_BLOCK = 30
 _BOUNDS = (0.25, 2.5)
@@ -80,28 +80,28 @@ def gain_span(envelope: np.ndarray, noise: float, time_ns: np.ndarray, *, start_
     return float(time_ns[-1])
 
 
-def noise_is_seen(
-    envelope: np.ndarray, time_ns: np.ndarray, *, power: float, start_ns: float, period_ns: float
-) -> bool:
+def noise_is_seen(envelope: np.ndarray, time_ns: np.ndarray, *, start_ns: float, period_ns: float) -> bool:
     """Tell whether the end of the record is noise: its level has stopped falling.
 
-    The decay is fitted on the first half after ``start_ns``, spreading removed, and continued over the last quarter;
-    noise is there when the last quarter moves by less than a fifth of that. False when there is too little of either
-    to tell.
+    The slope, in dB/ns, of the last eighth after ``start_ns`` is compared with that from the envelope's maximum up to
+    there; both are medians of all pairwise slopes. Noise is there when the last eighth moves by less than 15 % of
+    what the fall before would make of it. False when there is too little of either to tell.
     """
     time = np.asarray(time_ns, float)
-    border = time[-1] - _LATE * (time[-1] - start_ns)
-    early = (start_ns, float(start_ns + _EARLY * (time[-1] - start_ns)))
-    fitted = absorption(envelope, 0.0, time, power=power, span_ns=early, period_ns=period_ns, most=np.inf)
     smooth = _median(np.asarray(envelope, float), max(round(period_ns / (time[1] - time[0])) | 1, 3))
-    late = (time > border) & (smooth > 0)
-    if fitted is None or late.sum() < 5:
+    border = time[-1] - max(_LATE * (time[-1] - start_ns), _LATE_PERIODS * period_ns)
+    use = (time >= start_ns) & (smooth > 0)
+    t, level = time[use], 20.0 * np.log10(smooth[use])
+    late = t > border
+    before = ~late
+    if before.sum() < 5 or late.sum() < 5:
         return False
-    t = time[late]
-    every = max(1, t.size // 100)
-    length = t[-1] - t[0]
-    fall = -length * _slope(t[::every], 20.0 * np.log10(smooth[late][::every]))
-    expected = fitted * length + 20.0 * power * np.log10(t[-1] / t[0])
+    top = int(np.argmax(level[before]))
+    if before.sum() - top >= 5:
+        before[:top] = False
+    length = float(t[-1] - border)
+    fall = -length * _slope(t[late], level[late])
+    expected = -length * _slope(t[before], level[before])
     return bool(abs(fall) < max(_FLAT * expected, _FLAT_DB))
 
 
@@ -204,7 +204,9 @@ def _falls(level: np.ndarray, f: np.ndarray, peak: int, share: float, way: int) 
 
 
 def _slope(t: np.ndarray, level: np.ndarray) -> float:
-    """Return the median of all pairwise slopes."""
+    """Return the median of all pairwise slopes, of at most some 200 points."""
+    every = -(-t.size // 200)
+    t, level = t[::every], level[::every]
     i, j = np.triu_indices(t.size, 1)
     return float(np.median((level[j] - level[i]) / (t[j] - t[i])))
 

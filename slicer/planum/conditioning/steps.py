@@ -157,7 +157,7 @@ class Gain:
         period = 1.0 / facts.centre_frequency_ghz
         time, start = facts.geometry.times(), self._start(facts, params)
         envelope = np.asarray(facts.envelope, float)
-        if not learning.noise_is_seen(envelope, time, power=params.power, start_ns=start, period_ns=period):
+        if not learning.noise_is_seen(envelope, time, start_ns=start, period_ns=period):
             return None
         return learning.gain_span(envelope, facts.noise, time, start_ns=start, period_ns=period)
 

@@ -122,7 +122,10 @@ def outlook(site: Path, *, roots: Sequence[Path] = (), progress: Progress | None
     found = _Found(aside=list(survey.set_aside), warnings=list(survey.warnings))
     chosen: dict[str, BaseModel] = {}
     with found.collect():
-        chosen = settings({"steps": survey.config.recipe.names(), **survey.config.recipe.settings()})
+        chosen = settings(
+            {"steps": survey.config.recipe.names(), **survey.config.recipe.settings()},
+            centre_ghz=[r.centre_frequency_mhz / 1e3 for r in survey.config.radar],
+        )
     lines = _read_all(survey, found, progress)
     if not lines:
         found.problems.insert(0, Problem("no line can be used", do="mend what is wrong with each"))
