@@ -18,8 +18,9 @@ from planum.lines.segy_write import write_segy
 from planum.outputs import look as look_picture
 from planum.pipeline.run import RunResult
 from planum.records import StepSpec
-from planum_cli.commands import demo
+from planum_cli.commands import about, demo
 from planum_cli.main import cli
+from planum_cli.talk import aligned
 
 
 class SetOf(NamedTuple):
@@ -522,6 +523,24 @@ def test_about_prints_a_statement_as_aligned_lines(tmp_path: Path, monkeypatch: 
     (tmp_path / "a.nc").write_text("")
     done = run("about", tmp_path / "a.nc")
     assert done.stdout == "top m    0 ... 39 (40 slices)\nsurface  as walked\n"
+
+
+def test_about_gives_every_kind_of_file_in_one_order(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """GeoTIFF tags come by the alphabet: bottom before top."""
+    said = {"bottom_m": "0.5", "cautions": "c", "surface": "s", "top_m": "0.4", "zz_of_tomorrow": "z"}
+    monkeypatch.setattr("planum.outputs.about.statement_in", lambda _: said)
+    (tmp_path / "a.tif").write_text("")
+    names = [line.split("  ")[0] for line in run("about", tmp_path / "a.tif").stdout.splitlines()]
+    assert names == ["top m", "bottom m", "surface", "cautions", "zz of tomorrow"]
+
+
+def test_about_keeps_long_values_beside_their_names() -> None:
+    """On a terminal of 40 columns nothing runs back to the left edge, and no word is lost."""
+    text = "no clearance to dig: " * 8
+    rows = aligned(about._wrapped([("cautions", text), ("top m", "0.4")], 40)).splitlines()
+    assert max(map(len, rows)) <= 40
+    assert all(row.startswith((" " * 10, "cautions  ", "top m     ")) for row in rows)
+    assert " ".join(row[10:] for row in rows[:-1]).split() == text.split()
 
 
 def test_about_a_file_that_says_nothing(tmp_path: Path) -> None:

@@ -319,7 +319,7 @@ def _unlikely(found: Found, full: Answers, given: dict[str, object]) -> list[Pro
     traces = length / max(found.n_traces - 1, 1)
     told = []
     if spaced and long and spacing > length:
-        told.append(f"lines are {spacing:g} m apart and only {length:g} m long: are spacing and length swapped?")
+        told.append(f"lines are {spacing:g} m apart and only {length:g} m long, as if spacing and length were swapped")
     if spaced and spacing > FAR_LINES_M:
         told.append(f"lines are {spacing:g} m apart, more than {FAR_LINES_M:g} m: between them nothing will be known")
     if long and traces < CLOSE_TRACES_M:
