@@ -46,6 +46,19 @@ def test_a_wall_beats_as_many_cells_of_stones(seed: int, strength: float) -> Non
     assert found > 2.0 * structure(ground(rng) + strength * many, spacing=SPACING)
 
 
+def test_a_handful_of_huge_stones_in_quiet_ground_loses_to_walls_that_fill_a_fifth() -> None:
+    """Ten stones of 5 x 15 cells, 300 standard deviations strong, against walls that a median deviation would drown."""
+    rng = np.random.default_rng(6)
+    quiet, walls = 0.1 * ground(rng), ground(rng)
+    for y, x in zip(rng.integers(0, 285, 10), rng.integers(0, 310, 10), strict=True):
+        quiet[y : y + 15, x : x + 5] += 300 * quiet.std()
+    y, x = np.mgrid[:300, :320]
+    away = np.maximum(np.abs(x - 150), np.abs(y - 150))
+    inside = (away > 60) & (away <= 95)
+    assert inside.mean() > 0.2
+    assert structure(walls + 1.5 * inside, spacing=SPACING) > 1.5 * structure(quiet, spacing=SPACING)
+
+
 def test_the_quantile_that_stones_win_would_choose_them() -> None:
     """The test above would be idle if raw quantiles told walls from stones as well."""
     rng = np.random.default_rng(0)

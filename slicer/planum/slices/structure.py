@@ -10,6 +10,7 @@ from collections.abc import Sequence
 
 import numpy as np
 from scipy.ndimage import gaussian_filter
+from scipy.special import ndtri
 
 __all__ = ["FINE", "best_slices", "coarse", "smoothed", "structure"]
 
@@ -18,6 +19,10 @@ SPACINGS = 1.25
 HIGH = 0.985
 """A wall of 60 cm and 10 m on a field of 20 m square covers 1.5 % of it: the part that stands out may be as small.
 A strip along the rim, where the first and last lines often differ, covers more and gains nothing from it."""
+WEAK = (0.05, 0.25)
+"""Quantiles of the weak side."""
+CUT = 20.0
+"""Standard deviations: a good wall has ten to twenty in unsmoothed cells, a stone may have hundreds."""
 FINE = 2.5
 """Cells per standard deviation that are kept: a Gaussian of 2.5 cells holds nothing a coarser cell would lose."""
 REACH = 3.0
@@ -28,9 +33,11 @@ MOST_BEST = 6
 def structure(plane: np.ndarray, *, spacing: float) -> float:
     """Return how far extended features stand out of one slice, in robust standard deviations.
 
-    The plane is smoothed over 1.25 line spacings; its 0.985 quantile less its median is divided by 1.4826 times the
-    median absolute deviation, which is the standard deviation of a normal distribution (Rousseeuw & Croux 1993, from
-    memory). A plane of smoothed normal noise gives 2.17, the 0.985 quantile of the normal distribution.
+    Cells are cut off at 20 standard deviations, or one stone could outweigh a wall; the plane is smoothed over 1.25
+    line spacings; its 0.985 quantile is told in standard deviations from the middle. Middle and deviation are those
+    of the normal distribution with the plane's own 0.05 and 0.25 quantiles (common practice): features are strong, so
+    the weak side shows the ground even where walls fill half a plane. A plane of smoothed normal noise gives 2.17,
+    the 0.985 quantile of the normal distribution.
 
     Parameters
     ----------
@@ -44,16 +51,27 @@ def structure(plane: np.ndarray, *, spacing: float) -> float:
     float
         0 or more; does not heed the unit of amplitude. 0 for a plane that is unknown or all the same.
     """
+    plane = np.asarray(plane, np.float32)
+    if not np.isfinite(plane).any():
+        return 0.0
+    middle, scatter = _ground(plane)
+    if scatter > 0.0:
+        plane = np.minimum(plane, np.float32(middle + CUT * scatter))
     sigma = SPACINGS * spacing
     by = max(1, int(sigma / FINE))
     known = smoothed(coarse(plane, by), sigma=sigma / by)
-    known = known[np.isfinite(known)].astype(float)
-    if known.size == 0:
-        return 0.0
-    middle, high = np.quantile(known, (0.5, HIGH))
-    # ground that is all the same but for the features has no median deviation
-    scatter = 1.4826 * float(np.median(np.abs(known - middle))) or float(known.std())
-    return float((high - middle) / scatter) if scatter > 0.0 else 0.0
+    middle, scatter = _ground(known)
+    high = float(np.quantile(known[np.isfinite(known)].astype(float), HIGH))
+    # ground that is all the same but for the features has no deviation of its own
+    scatter = scatter or float(np.nanstd(known, dtype=float))
+    return max((high - middle) / scatter, 0.0) if scatter > 0.0 else 0.0
+
+
+def _ground(plane: np.ndarray) -> tuple[float, float]:
+    """Return middle and standard deviation of the ground of a plane with a known cell, from its weak side."""
+    weak, less_weak = np.quantile(plane[np.isfinite(plane)].astype(float), WEAK)
+    scatter = float((less_weak - weak) / (ndtri(WEAK[1]) - ndtri(WEAK[0])))
+    return float(less_weak - ndtri(WEAK[1]) * scatter), scatter
 
 
 def best_slices(scores: Sequence[float], *, most: int = MOST_BEST) -> list[int]:
