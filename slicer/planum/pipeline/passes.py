@@ -15,7 +15,7 @@ from planum.survey.safety import inside
 
 __all__ = ["read_pieces", "row_key", "strip_of"]
 
-KERNEL_VERSION = 1
+KERNEL_VERSION = 2
 """Raised when placing, windows or flags change their numbers."""
 
 

@@ -35,7 +35,7 @@ __all__ = ["Resolution", "check_cells", "resolve"]
 
 MOST_CELLS = 400_000_000
 """Cells of one slice: beyond it grids are not one site, or a coordinate is mistyped."""
-SCAN_VERSION = 1
+SCAN_VERSION = 2
 Progress = Callable[[str, int, int], None]
 
 
@@ -65,7 +65,10 @@ def resolve(
     SurveyError, FrameError, RecipeError
         When the survey cannot be mapped as it stands; every problem found is in it.
     """
-    chosen = settings({"steps": survey.config.recipe.names(), **survey.config.recipe.settings()})
+    chosen = settings(
+        {"steps": survey.config.recipe.names(), **survey.config.recipe.settings()},
+        centre_ghz=[r.centre_frequency_mhz / 1e3 for r in survey.config.radar],
+    )
     warnings: list[Problem] = []
     lines, frames = from_headers(survey, lines, site_frames(survey), warnings)
     aside = list(set_aside)
