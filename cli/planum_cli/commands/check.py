@@ -34,8 +34,7 @@ def command(talk: Talk, site: Path, roots: tuple[Path, ...]) -> int:
 
     with talk.progress() as progress:
         seen = outlook(site, roots=roots, progress=progress)
-    for problem in (*seen.warnings, *seen.set_aside):
-        talk.tell(problem)
+    talk.tell_all(seen.warnings, last=seen.set_aside)
     talk.result("\n".join(_report(seen)))
     aside = len(seen.set_aside)
     if aside:
@@ -45,7 +44,9 @@ def command(talk: Talk, site: Path, roots: tuple[Path, ...]) -> int:
 
 
 def _report(seen: Outlook) -> list[str]:
-    frame = f"{seen.crs}, {count(seen.control, 'control point')}" if seen.crs else "local frame (no crs given)"
+    points = count(seen.control, "control point")
+    placed = f"the frame of {points} (no crs given)" if seen.control else "local frame (no crs given)"
+    frame = f"{seen.crs}, {points}" if seen.crs else placed
     head = [("survey", f"{seen.title} ({seen.code})"), ("frame", frame), ("steps", ", ".join(seen.steps))]
     parts = [aligned(head)]
     for one in seen.sets:
