@@ -91,6 +91,20 @@ def test_the_statement_is_inside(drawn, statements):
             assert picture.text["Description"] == statement.sentence()
 
 
+def test_a_slice_in_noise_is_marked(tmp_path, slices, statements):
+    """The same slice with and without the mark differs above the map, and the sentence holds the words."""
+    marked = tuple(s.model_copy(update={"noise": "below the depth where ground sinks into noise"}) for s in statements)
+    stretch = stretch_of(slices)
+    plain = draw_slices(tmp_path / "a", slices, statements, stretch)[0]
+    noisy = draw_slices(tmp_path / "b", slices, marked, stretch)[0]
+    heads = [np.asarray(Image.open(p))[44:72, 70:400] for p in (plain, noisy)]
+    assert (heads[0] == 255).all()
+    assert (heads[1] < 150).sum() > 100
+    with Image.open(noisy) as picture:
+        picture.load()
+        assert "; below the depth where ground sinks into noise; " in picture.text["Description"]
+
+
 def test_the_same_slice_gives_the_same_bytes(drawn, tmp_path, slices, statements):
     again = draw_slices(tmp_path, slices, statements, drawn[1])
     assert [p.name for p in again] == [p.name for p in drawn[0]]
@@ -119,6 +133,27 @@ def test_the_contact_sheet_holds_every_slice(tmp_path, slices, statements):
     assert sizes.count(largest) == len(statements)
     # Thumbnails keep the raster's shape, to a pixel.
     assert largest[1] / largest[0] == pytest.approx(160 / 121, rel=0.01)
+
+
+def test_a_missing_line_is_not_white_in_the_contact_sheet(tmp_path, make_slices, make_statements):
+    """Weak ground all over (white) but for four unknown rows of cells: a strip that is seen, in every thumbnail."""
+    slices = make_slices(n=2)
+    weak = np.zeros(slices["amplitude"].shape, np.float32)
+    weak[:, :2] = 500.0  # gives the stretch its other end
+    weak[:, 60:64] = np.nan
+    slices = slices.assign(amplitude=(("depth", "y", "x"), weak))
+    path = tmp_path / "sheet.png"
+    draw_contact_sheet(path, slices, make_statements(slices), stretch_of(slices))
+    picture = np.asarray(Image.open(path))
+    parts, _ = label(picture == 150, structure=np.ones((3, 3)))
+    boxes = [b for b in find_objects(parts) if b[0].stop - b[0].start > 200]
+    assert len(boxes) == 2
+    for rows, columns in boxes:
+        inside = picture[rows, columns][5:-5, 5:-5]
+        middle = round(62 / 121 * (rows.stop - rows.start)) - 5
+        assert inside[middle].max() < 240
+        assert inside[middle].min() < 200
+        assert inside[middle - 40].min() > 250
 
 
 def test_one_plane_is_read_at_a_time(tmp_path, planes_per_compute, make_statements):

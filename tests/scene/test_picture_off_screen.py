@@ -12,6 +12,7 @@ import xarray as xr
 from PIL import Image
 
 from planum.errors import Problem
+from planum.outputs.about import statement_in
 from planum.scene.build import Scene, build_scene
 from planum.scene.drawing import aim
 from planum.scene.picture import render, render_safely
@@ -66,6 +67,17 @@ def test_the_isosurface_is_warm_where_the_wall_is(ring: xr.Dataset, tmp_path: Pa
     assert colour.std() > 20  # nowhere near blank
     assert np.all(colour[5, 5] == 255)  # white paper
     assert Image.open(path).text["Warning"].startswith("Depth slices are no clearance to dig")
+
+
+def test_the_picture_tells_about_itself(ring: xr.Dataset, tmp_path: Path) -> None:
+    """What the slices state, in the chunk that is read from every picture of a run; without it there is none."""
+    stated = ring.assign_attrs(statement_date="2026-04-18", statement_top_m=np.array([0.05, 0.15]))
+    render(build_scene(stated), tmp_path / "a.png", size=(160, 110))
+    assert statement_in(tmp_path / "a.png") == {
+        "date": "2026-04-18",
+        "top_m": "0.05 | 0.15",
+        "line_spacing_m": "0.25",
+    }
 
 
 def test_unknown_ground_stays_white(ring: xr.Dataset, tmp_path: Path) -> None:
