@@ -293,3 +293,31 @@ def test_typed_corners_must_fit_the_found_ones():
     with pytest.raises(RecipeError, match=r"high_pass_ghz = .* of which low_pass_ghz typed") as caught:
         BANDPASS.learn(facts(), BANDPASS.Params(low_pass_ghz=0.9))
     assert caught.value.problems[0].key == "recipe.bandpass.low_pass_ghz"
+
+
+@pytest.mark.parametrize("reach", [25.0, 32.0, 40.0])
+@pytest.mark.parametrize("loss", [0.3, 0.6])
+def test_decay_is_fitted_with_its_noise_wherever_the_record_ends(loss, reach):
+    """Spreading 1/t, a loss in dB/ns and a noise floor: both come back though the record ends on the slope into noise.
+
+    The search steps are 4 % of the last level, which is up to a third noise-free here: 12 % for the loss, and a floor
+    within a third.
+    """
+    time = np.arange(-3.0, reach, 0.3)
+    signal = 1000.0 * 10 ** (-loss * np.maximum(time, 1.0) / 20.0) / np.maximum(time, 1.0)
+    floor = 1000.0 * 10 ** (-loss * 24.0 / 20.0) / 24.0  # signal and noise meet at 24 ns
+    envelope = np.hypot(signal, floor)
+    late = float(np.median(envelope[-8:]))
+    found, noise = learning.decay(envelope, late, time, power=1.0, start_ns=5.5, period_ns=2.5)
+    assert found == pytest.approx(loss, rel=0.12)
+    assert noise == pytest.approx(floor, rel=0.34)
+
+
+def test_decay_without_noise_finds_none():
+    """A pure decay: its loss to a per cent, and no floor above two search steps."""
+    time = np.arange(-3.0, 40.0, 0.3)
+    envelope = 1000.0 * 10 ** (-0.5 * np.maximum(time, 1.0) / 20.0) / np.maximum(time, 1.0)
+    late = float(np.median(envelope[-8:]))
+    found, noise = learning.decay(envelope, late, time, power=1.0, start_ns=5.5, period_ns=2.5)
+    assert found == pytest.approx(0.5, rel=0.01)
+    assert noise <= 0.081 * late

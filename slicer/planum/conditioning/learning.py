@@ -62,6 +62,10 @@ class Corners(NamedTuple):
         return cls(a, b, c, d, note)
 
 
+_RESOLVED = 0.02
+"""Share of the power that must be left after noise is taken off: below it the difference is mostly error."""
+
+
 def gain_span(envelope: np.ndarray, noise: float, time_ns: np.ndarray, *, start_ns: float, period_ns: float) -> float:
     """Return the time in ns where the median envelope meets twice the noise and stays there for two periods.
 
@@ -103,6 +107,42 @@ def noise_is_seen(envelope: np.ndarray, time_ns: np.ndarray, *, start_ns: float,
     fall = -length * _slope(t[late], level[late])
     expected = -length * _slope(t[before], level[before])
     return bool(abs(fall) < max(_FLAT * expected, _FLAT_DB))
+
+
+def decay(
+    envelope: np.ndarray,
+    late: float,
+    time_ns: np.ndarray,
+    *,
+    power: float,
+    start_ns: float,
+    period_ns: float,
+) -> tuple[float, float] | None:
+    """Return absorption in dB/ns and noise, fitted together where the record's end is not plainly noise.
+
+    Noise is sought between 0 and the ``late`` level in 25 steps; for each the absorption is the median of all pairwise
+    slopes of what is left, and the pair wins whose sum comes closest to the envelope in dB (mean of absolute
+    differences over points half a period apart). None with fewer than 5 points.
+    """
+    step = float(time_ns[1] - time_ns[0])
+    every = max(round(period_ns / 2.0 / step), 1)
+    smooth = _median(np.asarray(envelope, float), max(every | 1, 3))
+    pick = np.flatnonzero((time_ns >= start_ns) & (smooth > 0))[::every]
+    t, level = time_ns[pick], smooth[pick]
+    best: tuple[float, float, float] | None = None
+    for noise in late * np.linspace(0.0, 1.0, 26):
+        signal = level**2 - noise**2
+        use = signal > _RESOLVED * level**2
+        if use.sum() < 5:
+            continue
+        left = 10.0 * np.log10(signal[use]) + 20.0 * power * np.log10(t[use])
+        slope = _slope(t[use], left)
+        middle = float(np.median(left - slope * t[use]))
+        model = 10.0 ** ((middle + slope * t - 20.0 * power * np.log10(t)) / 10.0) + noise**2
+        miss = float(np.mean(np.abs(10.0 * np.log10(model) - 20.0 * np.log10(level))))
+        if best is None or miss < best[0]:
+            best = miss, -slope, float(noise)
+    return None if best is None else (max(best[1], 0.0), best[2])
 
 
 def absorption(

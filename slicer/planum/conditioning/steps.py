@@ -93,7 +93,7 @@ class Gain:
     """The step ``gain``: one curve for the set, from spreading and measured absorption, stopped at the noise."""
 
     name = "gain"
-    version = 1
+    version = 2
     reach: Reach = "trace"
     takes: Quantity = "voltage"
     gives: Quantity = "voltage"
@@ -102,7 +102,7 @@ class Gain:
     def learn(self, facts: SetFacts, params: GainParams) -> GainParams:
         """Start after the direct ground wave and its pulse, stop at twice the noise, absorption in between.
 
-        Where the record ends before the noise begins, the gain goes on to its end.
+        Where the record ends before the noise plainly begins, noise is fitted with the absorption.
         """
         start, stop, loss = self._found(facts, params, most=learning.ABSORPTION_MOST)
         found = {"start_ns": round(start, 6), "stop_ns": round(stop, 6), "absorption_db_per_ns": round(loss, 9)}
@@ -162,21 +162,28 @@ class Gain:
         return learning.gain_span(envelope, facts.noise, time, start_ns=start, period_ns=period)
 
     def _found(self, facts: SetFacts, params: GainParams, *, most: float) -> tuple[float, float, float]:
-        """Return start, stop and absorption."""
+        """Return start, stop and absorption.
+
+        Where the record's end is plainly noise, that noise is known; else noise and absorption are fitted together, and
+        the gain stops at twice the fitted noise, if there is any.
+        """
         start, meets = self._start(facts, params), self._meets(facts, params)
-        time = facts.geometry.times()
-        stop = max(params.stop_ns or (float(time[-1]) if meets is None else meets), start)
+        time, period = facts.geometry.times(), 1.0 / facts.centre_frequency_ghz
+        envelope = np.asarray(facts.envelope, float)
+        known = {"power": params.power, "period_ns": period}
         loss = params.absorption_db_per_ns
+        stop = params.stop_ns or meets
+        if stop is None:
+            fitted = learning.decay(envelope, facts.noise, time, start_ns=start, **known)
+            found, floor = fitted or (0.0, 0.0)
+            stop = float(time[-1])
+            if floor > 0:
+                stop = learning.gain_span(envelope, floor, time, start_ns=start, period_ns=period)
+            loss = min(found, most) if loss is None else loss
+        stop = max(stop, start)
         if loss is None:
-            loss = learning.absorption(
-                np.asarray(facts.envelope, float),
-                0.0 if meets is None else facts.noise,
-                time,
-                power=params.power,
-                span_ns=(start, stop),
-                period_ns=1.0 / facts.centre_frequency_ghz,
-                most=most,
-            )
+            noise = 0.0 if meets is None else facts.noise
+            loss = learning.absorption(envelope, noise, time, span_ns=(start, stop), most=most, **known)
         return start, stop, loss or 0.0
 
 
