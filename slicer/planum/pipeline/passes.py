@@ -13,17 +13,22 @@ from planum.pipeline.census import Source
 from planum.records import LineEntry, SetPlan, Strip, key
 from planum.survey.safety import inside
 
-__all__ = ["read_pieces", "row_key", "strip_of"]
+__all__ = ["read_pieces", "row_key", "set_key", "strip_of"]
 
 KERNEL_VERSION = 2
 """Raised when placing, windows or flags change their numbers."""
 
 
-def row_key(plan: SetPlan, row: int) -> str:
-    """Return what one row's strip depends on, hashed: bytes, corrections, axes, chain and windows."""
-    entries = [e.model_dump(mode="json", exclude={"because", "key"}) for e in plan.entries if e.row == row]
+def set_key(plan: SetPlan) -> str:
+    """Return what all rows of a set depend on, hashed: axes, chain, windows and the way of reading."""
     chain = [s.model_dump(mode="json") for s in plan.chain]
-    return key([KERNEL_VERSION, row, entries, plan.geometry, chain, plan.windows_ns, plan.reader])
+    return key([KERNEL_VERSION, plan.geometry, chain, plan.windows_ns, plan.reader])
+
+
+def row_key(plan: SetPlan, row: int, *, common: str | None = None) -> str:
+    """Return what one row's strip depends on, hashed: bytes and corrections, and what is ``common`` to its set."""
+    entries = [e.model_dump(mode="json", exclude={"because", "key"}) for e in plan.entries if e.row == row]
+    return key([row, entries, set_key(plan) if common is None else common])
 
 
 def read_pieces(folder: Path, plan: SetPlan, row: int, *, roots: Sequence[Path] = ()) -> list[Piece]:

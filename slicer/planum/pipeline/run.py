@@ -24,7 +24,7 @@ from planum.pipeline import exchange
 from planum.pipeline.census import Source, census, in_order
 from planum.pipeline.estimate import Line
 from planum.pipeline.gridded import grid_stack, open_stack
-from planum.pipeline.passes import row_key, strip_of
+from planum.pipeline.passes import row_key, set_key, strip_of
 from planum.pipeline.products import section_key, section_picture, write_products
 from planum.pipeline.recipe import toml
 from planum.pipeline.repeat import differences, no_plan, of_this_site
@@ -278,8 +278,9 @@ def _second_pass(
     rows: dict[str, list[str | None]] = {s.name: [None] * s.geometry.n_lines for s in plan.sets}
     jobs: list[tuple[SetPlan, int, str]] = []
     for s in plan.sets:
+        common = set_key(s)
         for row in sorted({e.row for e in s.entries}):
-            rows[s.name][row] = row_key(s, row)
+            rows[s.name][row] = row_key(s, row, common=common)
             jobs.append((s, row, str(rows[s.name][row])))
 
     def one(job: tuple[SetPlan, int, str]) -> Problem | None:
