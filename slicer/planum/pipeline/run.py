@@ -26,7 +26,6 @@ from planum.pipeline.estimate import Line
 from planum.pipeline.gridded import grid_stack, open_stack
 from planum.pipeline.passes import row_key, set_key, strip_of
 from planum.pipeline.products import section_key, section_picture, write_products
-from planum.pipeline.recipe import toml
 from planum.pipeline.repeat import differences, no_plan, of_this_site
 from planum.pipeline.resolve import Resolution, check_cells, resolve
 from planum.pipeline.store import Store
@@ -35,7 +34,7 @@ from planum.records import Plan, SetPlan
 from planum.survey.folder import Survey, read_survey
 from planum.survey.register import RegisterRow
 
-__all__ = ["RunResult", "map_site", "plan_site", "read_run", "recipe_text", "sources_of"]
+__all__ = ["RunResult", "map_site", "plan_site", "read_run", "sources_of"]
 
 Progress = Callable[[str, int, int], None]
 
@@ -199,12 +198,6 @@ def read_run(path: Path) -> tuple[Plan, dict[str, Any]]:
         return plan, record
     except (OSError, ValueError, KeyError, TypeError) as fault:
         raise no_plan(path, fault) from fault
-
-
-def recipe_text(site: Path, *, progress: Progress | None = None) -> str:
-    """Return the resolved recipe of every set as TOML."""
-    plan = plan_site(site, progress=progress)
-    return "\n".join(f"# set {s.name}\n{toml(s.chain)}" for s in plan.sets)
 
 
 def sources_of(survey: Survey) -> list[tuple[RegisterRow, Source]]:
