@@ -161,7 +161,7 @@ def test_the_shallowest_set_meets_noise_first_and_one_that_never_does_says_so() 
     never = run_of(sets[0])
     assert noise_depth(never.plan) is None
     (noise,) = {s.noise for s in statements(never.plan, stack(), STRETCH)}
-    assert noise == "ground stands above noise to the end of the record"
+    assert noise == "where ground sinks into noise is not known: the record ends before its level is even"
 
 
 # --- missing lines, summary, identity ---

@@ -19,7 +19,7 @@ from planum.survey.control import ControlPoint
 
 __all__ = ["PRODUCTS_VERSION", "RunFacts", "noise_depth", "statements", "versions"]
 
-PRODUCTS_VERSION = 2
+PRODUCTS_VERSION = 3
 """Raised when wording, pictures or formats change, so that an unchanged survey is written anew."""
 
 FILL = (
@@ -132,7 +132,7 @@ def noise_depth(plan: Plan) -> float | None:
 
 def _noise(limit_m: float | None, middle_m: float) -> str:
     if limit_m is None:
-        return "ground stands above noise to the end of the record"
+        return "where ground sinks into noise is not known: the record ends before its level is even"
     if middle_m > limit_m + 1e-9:
         return f"below the depth where ground sinks into noise ({limit_m:.2f} m): only strong reflectors show"
     return f"above the depth where ground sinks into noise ({limit_m:.2f} m)"
