@@ -24,6 +24,7 @@ from planum.lines.reading import read_line
 from planum.lines.recording import ReadOptions
 from planum.lines.segy_write import write_segy
 from planum.pipeline import census, passes, products
+from planum.pipeline import run as run_module
 from planum.pipeline.cubes import open_cube
 from planum.pipeline.run import RunResult, map_site, plan_site, read_run
 
@@ -226,6 +227,22 @@ def test_a_full_disk_leaves_the_former_run_and_nothing_half(
     assert not list(site.glob(".out*"))
     assert not (site / "out").exists()
     assert is_whole(map_site(site).out)
+
+
+def test_a_line_that_failed_once_is_tried_again(
+    scrap: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch, no_isosurface: None
+) -> None:
+    """A passing fault in the second pass sets a line aside for that run only: the next one does not call it whole."""
+    site = copied(scrap, tmp_path)
+    real = run_module.strip_of
+    fault = Problem(came="the stick was pulled out", file="lines/x.sgy")
+    with monkeypatch.context() as once:
+        once.setattr(run_module, "strip_of", lambda f, s, row, **k: fault if row == 2 else real(f, s, row, **k))
+        assert map_site(site).set_aside == (fault,)
+    again = map_site(site)
+    assert again.changed
+    assert again.set_aside == ()
+    assert not map_site(site).changed
 
 
 def test_no_usable_line_is_an_error(page: Path, tmp_path: Path) -> None:

@@ -121,8 +121,9 @@ def _run(
     if _whole(final, token):
         return RunResult(final, run.set_aside, warnings, changed=False, summary=run.summary())
     rows, failed = _second_pass(survey, plan, store, executor, progress)
-    if failed:
+    if failed:  # named differently from the run that would be whole, so that the next command tries again
         run = run.without(failed)
+        token = run.output_key()
     stack = open_stack(grid_stack(plan, rows, store, progress=progress), plan)
     sections = {
         (s.name, row): store.path("sections", section_key(plan, s, row, k), ".png")
