@@ -41,11 +41,6 @@ class SegyLayout:
     text_encoding: str
     problems: tuple[Problem, ...]
 
-    @property
-    def trace_bytes(self) -> int:
-        """Bytes of one trace with its headers."""
-        return TRACE_HEAD * (1 + self.extra_heads) + self.n_samples * int(FORMATS[self.format][1:])
-
 
 def byte_order(head: bytes) -> str | None:
     """Return ">" or "<" by the revision 2 constant, else by a known format code; None when neither fits.

@@ -203,15 +203,13 @@ class Floor:
 
 
 @dataclass(frozen=True)
-class Pit:
-    """A cut with sloping sides: the interface falls from ``top_m`` at the rim to ``base_m`` at the middle."""
+class _Outlined:
+    """A feature known by its outline between two depths."""
 
     name: str
     outline: Points
     top_m: float
     base_m: float
-    strength: float = 0.2
-    kind: str = "pit"
 
     def plan(self) -> Polygon:
         """Outline, m."""
@@ -220,6 +218,14 @@ class Pit:
     def depths(self) -> tuple[float, float]:
         """Top and base, m."""
         return self.top_m, self.base_m
+
+
+@dataclass(frozen=True)
+class Pit(_Outlined):
+    """A cut with sloping sides: the interface falls from ``top_m`` at the rim to ``base_m`` at the middle."""
+
+    strength: float = 0.2
+    kind: str = "pit"
 
     def scatterers(self, rng: np.random.Generator) -> Scatterers:
         """Cut the interface into pieces of 6 cm; the profile is a half cosine of the distance from the rim."""
@@ -344,23 +350,11 @@ class Stones:
 
 
 @dataclass(frozen=True)
-class Gravel:
+class Gravel(_Outlined):
     """A patch of pebbles: dense, random in sign and depth. ``strength`` is one pebble's, pebbles lie 8 cm apart."""
 
-    name: str
-    outline: Points
-    top_m: float
-    base_m: float
     strength: float = 0.001
     kind: str = "gravel"
-
-    def plan(self) -> BaseGeometry:
-        """Outline, m."""
-        return Polygon(self.outline)
-
-    def depths(self) -> tuple[float, float]:
-        """Top and base, m."""
-        return self.top_m, self.base_m
 
     def scatterers(self, rng: np.random.Generator) -> Scatterers:
         """One pebble per 8 cm cell, anywhere in it."""
